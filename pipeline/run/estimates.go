@@ -21,6 +21,12 @@ type Estimates struct {
 	FromS, ToS float64 // first and last time
 	RateHz     float64 // sampling rate, 0 while unknown
 
+	// What turned deflection into force, where it is known, and where it is
+	// from ("header" or "settings").
+	SpringConstant    *Quantity
+	Sensitivity       *Quantity
+	CalibrationSource string
+
 	Sampling Sampling
 	Clips    []Clip
 

@@ -1,0 +1,117 @@
+package qc
+
+import (
+	"fmt"
+	"strings"
+	"unicode"
+	"unicode/utf8"
+
+	"platen/pipeline/run"
+)
+
+// judgeClipping: share of samples that stand still at the extreme force.
+func judgeClipping(c *court) {
+	for _, k := range c.e.Clips {
+		at := scope{nil, k.FromS, k.ToS}
+		if k.Dead {
+			c.find(run.ToRepeat, at, value{k.Fraction, 0, c.l.ClippedRepeat / 100, "1"},
+				fmt.Sprintf("The %s never changes: all %d samples are the same.", k.Channel, k.Samples),
+				"Check that the force sensor is connected and the right channel is exported.")
+			continue
+		}
+		sev, limit := graded(k.Fraction, 0, c.l.ClippedReview/100, c.l.ClippedRepeat/100)
+		if sev == "" {
+			continue
+		}
+		c.find(sev, at, value{k.Fraction, 0, limit, "1"},
+			fmt.Sprintf("The %s is clipped at %.4g nN: %d samples from %.0f s to %.0f s stand still there.", k.Channel, 1e9*k.Value, k.Samples, k.FromS, k.ToS),
+			"Lower the sensor's gain, its offset or the load, and repeat this cell.")
+	}
+}
+
+// judgeSampleGap: time missing between samples, s.
+func judgeSampleGap(c *court) {
+	s := c.e.Sampling
+	if s.Gaps == 0 {
+		return
+	}
+	sev, limit := graded(s.MissingS, 0, c.l.GapReview*1e-3, c.l.GapRepeat*1e-3)
+	if sev == "" {
+		sev = run.Info
+	}
+	times := "once"
+	if s.Gaps > 1 {
+		times = fmt.Sprintf("%d times", s.Gaps)
+	}
+	c.find(sev, scope{nil, s.Longest.FromS, s.Longest.ToS}, value{s.MissingS, 0, limit, "s"},
+		fmt.Sprintf("Samples are missing %s, %.0f ms in all; the longest gap is at %.2f s.", times, 1e3*s.MissingS, s.Longest.FromS),
+		"Close other programs on the instrument's computer; write to a local disk.")
+}
+
+// judgeTimeOrder: time stamps that step back.
+func judgeTimeOrder(c *court) {
+	s := c.e.Sampling
+	if s.Backward == 0 {
+		return
+	}
+	sev := run.ToReview
+	if float64(s.Backward) > c.l.StepsBackRepeat {
+		sev = run.ToRepeat
+	}
+	c.find(sev, scope{nil, s.FirstBackS, c.e.ToS}, value{float64(s.Backward), 0, c.l.StepsBackRepeat, "steps"},
+		fmt.Sprintf("Time goes backward %d time(s), first at sample %d (%.4g s): rows are out of order or written twice.", s.Backward, s.FirstBackAt+1, s.FirstBackS),
+		"Export the run again; if it stays so, look for a clock that is set while recording.")
+}
+
+// judgeTruncated: share of the declared samples that are missing, once the run
+// is over.
+func judgeTruncated(c *court) {
+	if !c.over || c.e.Trouble != nil {
+		return
+	}
+	declared := c.e.Header.Samples
+	if declared > c.e.Samples {
+		missing := 1 - float64(c.e.Samples)/float64(declared)
+		sev, limit := graded(missing, 0, 0, c.l.TruncatedRepeat/100)
+		c.find(sev, c.whole(), value{missing, 0, limit, "1"},
+			fmt.Sprintf("The file ends early: %d of %d declared samples are there.", c.e.Samples, declared),
+			"See whether the export was stopped or the disk is full; export again if the instrument still has the run.")
+		return
+	}
+	if c.e.NULTail > 0 {
+		c.find(run.ToReview, c.whole(), value{},
+			fmt.Sprintf("The file ends in %d empty (NUL) bytes: it was allocated but not written to its end.", c.e.NULTail),
+			"See whether the instrument's program or computer stopped while writing; export again.")
+	}
+}
+
+// judgeUnreadable: bytes that are no run, or no longer one.
+func judgeUnreadable(c *court) {
+	t := c.e.Trouble
+	if t == nil {
+		return
+	}
+	sev := run.ToReview
+	if t.IsRun {
+		sev = run.ToRepeat
+	}
+	where := fmt.Sprintf("at byte %d", t.Byte)
+	if t.Line > 0 {
+		where = fmt.Sprintf("in line %d (byte %d)", t.Line, t.Byte)
+	}
+	c.find(sev, c.whole(), value{},
+		fmt.Sprintf("Cannot be read as a run %s: expected %s, got %s.", where, t.Want, t.Got), sentence(t.Fix))
+}
+
+// sentence makes a sentence of a phrase.
+func sentence(s string) string {
+	r, n := utf8.DecodeRuneInString(s)
+	if n == 0 {
+		return s
+	}
+	s = string(unicode.ToUpper(r)) + s[n:]
+	if !strings.HasSuffix(s, ".") {
+		s += "."
+	}
+	return s
+}
