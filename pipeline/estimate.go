@@ -113,8 +113,7 @@ func (s *sampler) frame(e *run.Estimates, zero *baseline, set Settings) *frame {
 	case run.VolumeImaged:
 		// The part of u that comes from the height's zero is moved together
 		// with the heights themselves (see common).
-		if moved, ok := imagedRadius(s.curve, &s.images, f.uOffset, set); ok && f.uOffset > 0 {
-			d := moved.Value - f.radius
+		if _, d, ok := imagedRadius(s.curve, &s.images, set); ok && f.uOffset > 0 {
 			f.radiusPerOffset = d / f.uOffset
 			f.uRadius = math.Sqrt(math.Max(0, f.uRadius*f.uRadius-d*d))
 		}
@@ -174,7 +173,7 @@ func (s *sampler) segmentOf(f *frame, t *track, budget int, final bool) run.Segm
 // volumeChange compares the imaged volume during a track with that of the
 // run's first images.
 func (s *sampler) volumeChange(f *frame, t *track) *run.Quantity {
-	ts, w, rs := s.images.radii(s.curve, 0)
+	ts, w, rs := s.images.radii(s.curve, 0, 1)
 	if len(rs) < 4*fewestImages {
 		return nil
 	}

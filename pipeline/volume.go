@@ -21,10 +21,11 @@ func (im *images) add(t, height, radius float64) {
 const fewestImages = 4
 
 // radii returns, for each image, the time and the radius of the uncompressed
-// sphere of the same volume; offset is added to the heights.
-func (im *images) radii(c *squeeze.Curve, offset float64) (t, w, rs []float64) {
+// sphere of the same volume; offset is added to the heights, and the imaged
+// radii are multiplied by scale.
+func (im *images) radii(c *squeeze.Curve, offset, scale float64) (t, w, rs []float64) {
 	for _, p := range im.points {
-		r := c.RadiusFromEquator(p.h+offset, p.f)
+		r := c.RadiusFromEquator(p.h+offset, p.f*scale)
 		if math.IsNaN(r) || r <= 0 {
 			continue // an outline that fits no squeezed sphere at this height
 		}
@@ -34,29 +35,39 @@ func (im *images) radii(c *squeeze.Curve, offset float64) (t, w, rs []float64) {
 }
 
 // imagedRadius is the mean sphere radius over all images. Its uncertainty is
-// that of the mean (by batches, so that slow scatter counts) and of the scale
-// of the image; the part that comes from the height's zero is added by the
-// caller, who moves the zero.
-func imagedRadius(c *squeeze.Curve, im *images, offset float64, s Settings) (run.Quantity, bool) {
-	t, w, rs := im.radii(c, offset)
+// that of the mean (by batches, so that slow scatter counts), of the scale of
+// the images, and of the zero of the height; byOffset is how far the zero's
+// uncertainty moves it. Both are moved and looked at: at half height a radius
+// that is imaged 1 % too large makes the sphere only some 0.6 % larger.
+func imagedRadius(c *squeeze.Curve, im *images, s Settings) (q run.Quantity, byOffset float64, ok bool) {
+	_, w, rs := im.radii(c, 0, 1)
 	if len(rs) < fewestImages {
-		return run.Quantity{}, false
+		return run.Quantity{}, 0, false
 	}
 	mean, uMean := weightedBatchMean(w, rs)
-	_ = t
-	scale := s.ImagedRadiusUPercent / 100 * mean
-	return run.Quantity{Value: mean, U: math.Hypot(uMean, scale)}, true
+	_, w1, scaled := im.radii(c, 0, 1+s.ImagedRadiusUPercent/100)
+	_, w2, moved := im.radii(c, s.HeightOffsetUNm*1e-9, 1)
+	if len(scaled) == 0 || len(moved) == 0 {
+		return run.Quantity{}, 0, false
+	}
+	byScale := weightedMeanOf(w1, scaled) - mean
+	byOffset = weightedMeanOf(w2, moved) - mean
+	return run.Quantity{Value: mean, U: math.Sqrt(uMean*uMean + byScale*byScale + byOffset*byOffset)}, byOffset, true
 }
 
-// weightedBatchMean returns the mean and its standard uncertainty from the
-// scatter of up to sixteen batches of consecutive values.
-func weightedBatchMean(w, x []float64) (mean, u float64) {
+func weightedMeanOf(w, x []float64) float64 {
 	var sw, sx float64
 	for i := range x {
 		sw += w[i]
 		sx += w[i] * x[i]
 	}
-	mean = sx / sw
+	return sx / sw
+}
+
+// weightedBatchMean returns the mean and its standard uncertainty from the
+// scatter of up to sixteen batches of consecutive values.
+func weightedBatchMean(w, x []float64) (mean, u float64) {
+	mean = weightedMeanOf(w, x)
 	n := min(16, len(x))
 	batches := make([]float64, n)
 	weights := make([]float64, n)
@@ -75,7 +86,7 @@ func weightedBatchMean(w, x []float64) (mean, u float64) {
 // imagedCourse is the relative change of the imaged volume over the run, from
 // a straight line through ln V.
 func imagedCourse(c *squeeze.Curve, im *images) *run.ImagedVolume {
-	t, w, rs := im.radii(c, 0)
+	t, w, rs := im.radii(c, 0, 1)
 	if len(rs) < 4*fewestImages {
 		return nil
 	}
@@ -106,10 +117,7 @@ func imagedCourse(c *squeeze.Curve, im *images) *run.ImagedVolume {
 func volumes(c *squeeze.Curve, im *images, h run.Header, contact *contact, s Settings) []run.Volume {
 	var out []run.Volume
 	offset := s.HeightOffsetUNm * 1e-9
-	if q, ok := imagedRadius(c, im, 0, s); ok {
-		if moved, ok := imagedRadius(c, im, offset, s); ok {
-			q.U = math.Hypot(q.U, moved.Value-q.Value)
-		}
+	if q, _, ok := imagedRadius(c, im, s); ok {
 		out = append(out, run.Volume{Source: run.VolumeImaged, RadiusM: q})
 	}
 	if d := h.DiameterM; d != nil && d.Value > 0 {
