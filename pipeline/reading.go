@@ -93,7 +93,8 @@ func (r *Reading) note(err error) {
 	}
 	var need *missingError
 	if errors.As(err, &need) {
-		r.trouble = &run.Trouble{Line: r.text.Line(), Byte: r.text.Byte(), Want: need.want, Got: need.got, Fix: need.fix, IsRun: true}
+		// It is the header that lacks something: there is no line to name.
+		r.trouble = &run.Trouble{Want: need.want, Got: need.got, Fix: need.fix, IsRun: true}
 		return
 	}
 	r.trouble = &run.Trouble{Line: r.text.Line(), Byte: r.text.Byte(), Want: "a run file", Got: err.Error(), Fix: "check the export"}
@@ -107,11 +108,11 @@ func (r *Reading) estimates(how run.Completion) run.Estimates {
 	e := run.Estimates{
 		Header:     h,
 		Completion: how,
-		Samples:    r.text.Rows(),
 		NULTail:    r.text.NULTail(),
 		Trouble:    r.trouble,
 	}
 	if r.samples != nil {
+		e.Samples = r.samples.taken()
 		r.samples.estimate(&e, r.settings)
 	}
 	return e

@@ -136,6 +136,9 @@ func (s *sampler) take(b *run.Block) error {
 	return nil
 }
 
+// taken returns the number of samples taken so far.
+func (s *sampler) taken() int64 { return s.seen + int64(len(s.first)) }
+
 func at(x []float64, i int) float64 {
 	if x == nil {
 		return math.NaN()

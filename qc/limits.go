@@ -19,6 +19,7 @@ type Limits struct {
 
 	LowSNRReview float64 `toml:"low_snr_review_db"`
 	LowSNRRepeat float64 `toml:"low_snr_repeat_db"`
+	LowSNRSample float64 `toml:"low_snr_sample_review_db"` // of single samples, may be negative
 
 	VolumeChangeReview float64 `toml:"volume_change_review_percent"`
 	VolumeChangeRepeat float64 `toml:"volume_change_repeat_percent"`
@@ -61,6 +62,7 @@ func Defaults() Limits {
 		TensionDriftRepeat: 60,
 		LowSNRReview:       30,
 		LowSNRRepeat:       20,
+		LowSNRSample:       6,
 		VolumeChangeReview: 4,
 		VolumeChangeRepeat: 8,
 		VolumeDisagreement: 5,
@@ -116,6 +118,9 @@ func (l Limits) Validate() error {
 		if p.review > p.repeat {
 			return fmt.Errorf("limits.%s...: the limit for review (%g) must be the milder, that for repeat (%g) the harsher", p.key, p.review, p.repeat)
 		}
+	}
+	if math.IsNaN(l.LowSNRSample) || math.IsInf(l.LowSNRSample, 0) {
+		return fmt.Errorf("limits.low_snr_sample_review_db: %g is no limit: must be a number", l.LowSNRSample)
 	}
 	return nil
 }

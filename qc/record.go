@@ -95,12 +95,15 @@ func judgeUnreadable(c *court) {
 	if t.IsRun {
 		sev = run.ToRepeat
 	}
-	where := fmt.Sprintf("at byte %d", t.Byte)
-	if t.Line > 0 {
-		where = fmt.Sprintf("in line %d (byte %d)", t.Line, t.Byte)
+	where := ""
+	switch {
+	case t.Line > 0:
+		where = fmt.Sprintf(" in line %d (byte %d)", t.Line, t.Byte)
+	case t.Byte > 0:
+		where = fmt.Sprintf(" at byte %d", t.Byte)
 	}
 	c.find(sev, c.whole(), value{},
-		fmt.Sprintf("Cannot be read as a run %s: expected %s, got %s.", where, t.Want, t.Got), sentence(t.Fix))
+		fmt.Sprintf("Cannot be read as a run%s: expected %s, got %s.", where, t.Want, t.Got), sentence(t.Fix))
 }
 
 // sentence makes a sentence of a phrase.

@@ -128,7 +128,7 @@ var table = []ruling{
 	}, judgeTensionDrift},
 	{Rule{
 		Name: "low-snr", What: "modulus over its scatter from cycle to cycle, 20 log10", Unit: "dB",
-		Limits:   "review below 30, repeat below 20",
+		Limits:   "review below 30, repeat below 20; review below 6 for single samples (snr_db)",
 		Reason:   "30 dB is a modulus known to 3 %, and so a loss part of a usual third of it known to 10 %; 20 dB is three times as wide",
 		Advice:   "larger amplitude or more cycles",
 		WhileRun: true, Cell: true,

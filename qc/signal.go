@@ -119,8 +119,8 @@ func modulus(s *run.Segment) (k, u float64, ok bool) {
 // judgeLowSNR: 20 log10(|K*|/u), dB, u the scatter of |K*| from cycle to
 // cycle. The ratio of single samples (snr_db, the SINAD of IEEE 1057) says
 // little about a modulus that is averaged over thousands of them, so it is the
-// modulus that is judged. Where the cell answers too weakly for any modulus,
-// snr_db is shown.
+// modulus that is judged first; but where single samples drown, nobody can see
+// whether hum or a jolt hides in the noise, so snr_db has a limit of its own.
 func judgeLowSNR(c *court) {
 	c.oscillations(func(s *run.Segment) {
 		const advice = "Use a larger amplitude (within the strain limit) or more cycles, or a softer sensor, and repeat this cell."
@@ -145,6 +145,11 @@ func judgeLowSNR(c *court) {
 			sev, limit = run.ToRepeat, c.l.LowSNRRepeat
 		case db < c.l.LowSNRReview:
 			sev = run.ToReview
+		case s.SNRdB != nil && *s.SNRdB < c.l.LowSNRSample:
+			c.find(run.ToReview, within(s), value{*s.SNRdB, 0, c.l.LowSNRSample, "dB"},
+				fmt.Sprintf("The signal is weak: from %.0f s to %.0f s the force of the oscillation hardly stands out of the noise (%.0f dB, limit %.0f dB).", s.FromS, s.ToS, *s.SNRdB, c.l.LowSNRSample),
+				advice)
+			return
 		default:
 			return
 		}
