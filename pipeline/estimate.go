@@ -78,6 +78,9 @@ func (s *sampler) estimate(e *run.Estimates, set Settings) {
 		seg := s.segmentOf(f, t, budget, final)
 		seg.Index = i
 		seg.VolumeChange = s.volumeChange(f, t)
+		if final && i > 0 && tracks[i-1].mode == run.Approach {
+			seg.Relaxation = f.relaxation(t)
+		}
 		e.Segments[i] = seg
 		if !t.open && e.Ended == i {
 			e.Ended = i + 1
@@ -265,7 +268,7 @@ func dropLost(s *run.Segment, lost []run.Interval) {
 		if l.ToS <= s.FromS || l.FromS >= s.ToS {
 			continue
 		}
-		s.TensionNPerM, s.TensionSlope, s.TensionScatter = nil, nil, nil
+		s.TensionNPerM, s.TensionSlope, s.TensionScatter, s.Relaxation = nil, nil, nil, nil
 		s.AreaStrainAmplitude, s.Distortion, s.PhaseDeg = nil, nil, nil
 		s.StorageNPerM, s.LossNPerM, s.StorageScatter, s.LossScatter = nil, nil, nil, nil
 	}

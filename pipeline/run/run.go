@@ -126,6 +126,7 @@ type Segment struct {
 	TensionSlope     *Quantity `json:"tension_slope_n_per_m_s,omitempty"`
 	VolumeChange     *Quantity `json:"volume_change,omitempty"` // imaged volume of this segment over the run's first images, minus 1
 
+	Relaxation          *Decay    `json:"relaxation,omitempty"` // of the tension, during a hold after a step
 	FrequencyHz         *Quantity `json:"frequency_hz,omitempty"`
 	Cycles              float64   `json:"cycles,omitempty"`
 	HeightAmplitudeM    *Quantity `json:"height_amplitude_m,omitempty"`

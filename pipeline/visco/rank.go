@@ -312,12 +312,14 @@ type Consistency struct {
 	P          float64 // probability of a larger chi-squared from noise alone
 }
 
-// KramersKronig tests whether K' and K” of a series belong together: any causal
-// linear material is well described by a spring, a dashpot and a row of Maxwell
-// elements at fixed times, which obey the relations by construction, so what
-// they leave of the data must be noise (the linear test after Boukamp,
-// J. Electrochem. Soc. 142, 1995, from memory). It needs at least four
-// frequencies; there are two elements less than frequencies.
+// KramersKronig tests whether K' and K” of a series belong together: what a
+// causal linear material can do is described by models that obey the relations
+// by construction, so what the best of them leaves of the data must be noise.
+// The models are those of Models and a row of Maxwell elements at fixed times
+// with a spring and a dashpot (the linear test after Boukamp, J. Electrochem.
+// Soc. 142, 1995, from memory), two elements less than frequencies. The best is
+// the one with the largest probability; that makes false alarms rarer than P
+// says. It needs at least four frequencies.
 func KramersKronig(series []Point) (Consistency, error) {
 	s, err := sorted(series)
 	if err != nil {
@@ -326,6 +328,28 @@ func KramersKronig(series []Point) (Consistency, error) {
 	if len(s) < 4 {
 		return Consistency{}, errors.New("visco: the Kramers-Kronig check needs at least four frequencies")
 	}
+	best, err := maxwellRow(s)
+	if err != nil {
+		return Consistency{}, err
+	}
+	r, err := Rank(s)
+	if err != nil {
+		return best, nil
+	}
+	for _, f := range r.Fits {
+		if c := consistency(f.ChiSquared, f.Freedom); c.P > best.P {
+			best = c
+		}
+	}
+	return best, nil
+}
+
+func consistency(chiSquared float64, freedom int) Consistency {
+	return Consistency{chiSquared, freedom, distuv.ChiSquared{K: float64(freedom)}.Survival(chiSquared)}
+}
+
+// maxwellRow fits the row of Maxwell elements.
+func maxwellRow(s []Point) (Consistency, error) {
 	elements := len(s) - 2
 	lo, hi := math.Log(2*math.Pi*s[0].FrequencyHz), math.Log(2*math.Pi*s[len(s)-1].FrequencyHz)
 	np := elements + 2
@@ -347,9 +371,7 @@ func KramersKronig(series []Point) (Consistency, error) {
 	if err != nil {
 		return Consistency{}, err
 	}
-	c := Consistency{ChiSquared: min.RSS, Freedom: 2*len(s) - np}
-	c.P = distuv.ChiSquared{K: float64(c.Freedom)}.Survival(c.ChiSquared)
-	return c, nil
+	return consistency(min.RSS, 2*len(s)-np), nil
 }
 
 func ones(n int) []float64 {
