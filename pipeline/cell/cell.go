@@ -97,7 +97,9 @@ type piece struct {
 	tension   run.Quantity
 	uTension  float64 // scatter only
 	force     float64 // relative uncertainty of the force scale
-	radius    run.Quantity
+	// what does not scatter of the moduli's uncertainties
+	commonStorage, commonLoss float64
+	radius                    run.Quantity
 }
 
 // Gather makes the document of a cell from those of its runs, which must all
@@ -109,7 +111,7 @@ func (t *Tables) Gather(runs []run.Result, s Settings, sw run.Software) *run.Cel
 		return cmp.Or(cmp.Compare(a.Run.Started, b.Run.Started), cmp.Compare(a.Run.ID, b.Run.ID))
 	})
 	c := &run.CellResult{Schema: run.CellSchema, Runs: []string{}, Moduli: []run.SheetModuli{},
-		FrequencyModels: []run.FrequencySerie{}, Findings: []run.Finding{}, Software: sw}
+		Effective: []run.EffectiveModulus{}, FrequencyModels: []run.FrequencySerie{}, Findings: []run.Finding{}, Software: sw}
 	var pieces []piece
 	for _, r := range runs {
 		if r.Run.Kind != run.KindCell || r.Run.Cell == "" {
@@ -142,6 +144,7 @@ func (t *Tables) Gather(runs []run.Result, s Settings, sw run.Software) *run.Cel
 		return c
 	}
 	t.size(c, pieces)
+	effective(c, pieces)
 	t.frequencies(c, pieces, s)
 	moduli := t.heights(c, pieces, s)
 	c.Advice, c.Enough = advise(c, pieces, moduli, s)
@@ -171,9 +174,14 @@ func piecesOf(r run.Result) []piece {
 			uStorage: *s.StorageScatter, uLoss: *s.LossScatter,
 			tension: *s.TensionNPerM, uTension: *s.TensionScatter,
 			force: force, radius: *r.Cell.SphereRadiusM,
+			commonStorage: common(s.StorageNPerM.U, *s.StorageScatter), commonLoss: common(s.LossNPerM.U, *s.LossScatter),
 		})
 	}
 	return out
+}
+
+func common(all, scatter float64) float64 {
+	return math.Sqrt(math.Max(0, all*all-scatter*scatter))
 }
 
 // size reports radius and tension: the tension at the lowest height, where the
@@ -191,6 +199,21 @@ func (t *Tables) size(c *run.CellResult, ps []piece) {
 		u = math.Min(u, p.radius.U)
 	}
 	c.SphereRadiusM = run.Known(sum, u)
+}
+
+// effective lists the moduli, repeats joined. What is common to the runs is
+// taken from the first of them.
+func effective(c *run.CellResult, ps []piece) {
+	for _, h := range groups(ps, ratioOf, sameRatio) {
+		for _, same := range groups(h, frequencyOf, sameFrequency) {
+			p := joined(same)
+			c.Effective = append(c.Effective, run.EffectiveModulus{
+				HeightRatio: p.ratio, FrequencyHz: p.frequency, Runs: len(same),
+				StorageNPerM: run.Known(real(p.k), math.Hypot(p.uStorage, same[0].commonStorage)),
+				LossNPerM:    run.Known(imag(p.k), math.Hypot(p.uLoss, same[0].commonLoss)),
+			})
+		}
+	}
 }
 
 // groups sorts pieces by key and parts them where neighbours differ by more

@@ -19,15 +19,26 @@ type CellResult struct {
 	TensionRatio  *Quantity `json:"tension_height_ratio,omitempty"`
 	SphereRadiusM *Quantity `json:"sphere_radius_m,omitempty"`
 
-	Moduli          []SheetModuli    `json:"moduli"`           // by frequency
-	FrequencyModels []FrequencySerie `json:"frequency_models"` // by height
-	Crossover       *Crossover       `json:"crossover_s,omitempty"`
-	Relaxation      []Relaxation     `json:"relaxation,omitempty"`
+	Effective       []EffectiveModulus `json:"effective"`        // by height and frequency, repeats joined
+	Moduli          []SheetModuli      `json:"moduli"`           // by frequency
+	FrequencyModels []FrequencySerie   `json:"frequency_models"` // by height
+	Crossover       *Crossover         `json:"crossover_s,omitempty"`
+	Relaxation      []Relaxation       `json:"relaxation,omitempty"`
 
 	Findings []Finding `json:"findings"`
 	Advice   string    `json:"advice"`
 	Enough   bool      `json:"enough"` // no further run is advised
 	Software Software  `json:"software"`
+}
+
+// EffectiveModulus is the effective area modulus at one height and frequency;
+// U is all of its uncertainty, the common part included.
+type EffectiveModulus struct {
+	HeightRatio  float64   `json:"height_ratio"`
+	FrequencyHz  float64   `json:"frequency_hz"`
+	StorageNPerM *Quantity `json:"storage_n_per_m,omitempty"`
+	LossNPerM    *Quantity `json:"loss_n_per_m,omitempty"`
+	Runs         int       `json:"runs"`
 }
 
 // SheetModuli are the moduli of the cortex as a sheet at one frequency, from
