@@ -1,6 +1,7 @@
 package store
 
 import (
+	"errors"
 	"fmt"
 	"slices"
 
@@ -18,139 +19,250 @@ func (p Problem) String() string { return p.Where + ": " + p.What }
 // Check tests every invariant of the store and reports all violations. The
 // error tells that the check itself could not be made.
 func (s *Store) Check() ([]Problem, error) {
-	var out []Problem
-	report := func(where, format string, args ...any) {
-		out = append(out, Problem{where, fmt.Sprintf(format, args...)})
+	s.mu.RLock()
+	defer s.mu.RUnlock()
+	if err := s.usable(); err != nil {
+		return nil, err
 	}
-	err := s.view(func(tx *bbolt.Tx) error {
-		// The pages of the file hang together.
-		for err := range tx.Check() {
-			report("file", "%v", err)
-		}
-		if len(out) > 0 {
-			return nil // the rest would read damaged pages
-		}
+	return s.check()
+}
 
-		records := map[string]Record{}
-		arrivals := map[uint64]string{}
-		// Every result is a record under its own key, with an arrival of its own.
-		if err := tx.Bucket(bucketResults).ForEach(func(k, v []byte) error {
-			r, err := decode[Record](v)
-			if err != nil {
-				report("results "+string(k), "not a record: %v", err)
-				return nil
-			}
-			if string(r.key()) != string(k) {
-				report("results "+string(k), "holds the record of %s", r.Ref)
-			}
-			if r.Result.Run.ID != r.ID {
-				report("results "+string(k), "its document has the id %s", r.Result.Run.ID)
-			}
-			if other, taken := arrivals[r.Arrival]; taken {
-				report("results "+string(k), "arrived at the same time as %s", other)
-			}
-			arrivals[r.Arrival] = string(k)
-			records[string(k)] = r
-			return nil
-		}); err != nil {
+func (s *Store) check() ([]Problem, error) {
+	c := &checker{}
+	// The pages of the file hang together: only then can bbolt follow them.
+	err := s.pagesInOrder()
+	if err == nil {
+		err = s.look(func(tx *bbolt.Tx) error { return c.all(tx) })
+	}
+	if d := (*DamagedError)(nil); errors.As(err, &d) {
+		c.report("file", "%s", d.Reason)
+		err = nil
+	}
+	return c.problems, err
+}
+
+// checker goes through one transaction.
+type checker struct {
+	problems []Problem
+	results  map[string]checked // by key in results
+	paths    map[string]Path
+}
+
+// checked is what is kept of a record: all of them at once would be too much.
+type checked struct {
+	Ref
+	paths        []string
+	supersededBy *Ref
+	indexKeys    []string // one for each of indexes
+}
+
+func (c *checker) report(where, format string, args ...any) {
+	c.problems = append(c.problems, Problem{where, fmt.Sprintf(format, args...)})
+}
+
+func (c *checker) has(r Ref) bool {
+	_, ok := c.results[string(r.key())]
+	return ok
+}
+
+func (c *checker) all(tx *bbolt.Tx) error {
+	// bbolt finds its own invariants kept.
+	for err := range tx.Check() {
+		c.report("file", "%v", err)
+	}
+	if len(c.problems) > 0 {
+		return nil // the rest would read damaged pages
+	}
+	// The layout is the one described in the package comment.
+	if n, err := schemaOf(tx); err != nil {
+		c.report("meta", "%v", err)
+		return nil
+	} else if n != schema {
+		return &SchemaError{tx.DB().Path(), n}
+	}
+	for _, loop := range []func(*bbolt.Tx) error{
+		c.eachResult, c.eachRevision, c.eachPath, c.eachName, c.eachIndex, c.eachUnannounced, c.eachEvent, c.eachCellDocument,
+	} {
+		if err := loop(tx); err != nil {
 			return err
 		}
+	}
+	return nil
+}
 
-		// Revisions of one id are numbered from 1 without a gap.
-		for k, r := range records {
-			if r.Revision > 1 {
-				if _, ok := records[string(Ref{r.ID, r.Revision - 1}.key())]; !ok {
-					report("results "+k, "revision %d is not there", r.Revision-1)
-				}
-			}
-		}
-
-		// Every path points at results that are there, and its current result
-		// knows it.
-		paths := map[string]Path{}
-		if err := tx.Bucket(bucketPaths).ForEach(func(k, v []byte) error {
-			p, err := decode[Path](v)
-			if err != nil {
-				report("paths "+string(k), "not a path: %v", err)
-				return nil
-			}
-			paths[string(k)] = p
-			for _, ref := range append(slices.Clone(p.Earlier), p.Current) {
-				if _, ok := records[string(ref.key())]; !ok {
-					report("paths "+string(k), "points at %s, which is not there", ref)
-				}
-			}
-			if r, ok := records[string(p.Current.key())]; ok && !slices.Contains(r.Paths, string(k)) {
-				report("paths "+string(k), "its result %s does not know it", p.Current)
-			}
+// Every result can be read, stands under its own key, and has an arrival of its
+// own, not later than the last one given.
+func (c *checker) eachResult(tx *bbolt.Tx) error {
+	c.results = map[string]checked{}
+	arrivals := map[uint64]string{}
+	b := tx.Bucket(bucketResults)
+	return b.ForEach(func(k, v []byte) error {
+		where := "results " + string(k)
+		r, err := decode[Record](k, v)
+		if err != nil {
+			c.report(where, "%v", err)
 			return nil
-		}); err != nil {
-			return err
 		}
-
-		// A result names exactly the paths whose current result it is, and is
-		// superseded when there are none.
-		for k, r := range records {
-			for _, p := range r.Paths {
-				if paths[p].Current != r.Ref {
-					report("results "+k, "names %s, whose current result is %s", p, paths[p].Current)
-				}
-			}
-			if (len(r.Paths) == 0) != (r.SupersededBy != nil) {
-				report("results "+k, "%d paths, superseded by %v", len(r.Paths), r.SupersededBy)
-			}
-			if r.SupersededBy != nil {
-				if _, ok := records[string(r.SupersededBy.key())]; !ok {
-					report("results "+k, "superseded by %s, which is not there", *r.SupersededBy)
-				}
-			}
+		if string(r.key()) != string(k) {
+			c.report(where, "holds the record of %s", r.key())
 		}
-
-		// Every result stands once in the index of its session, and nothing
-		// else does.
-		indexed := map[string]int{}
-		if err := tx.Bucket(bucketSessions).ForEach(func(k, ref []byte) error {
-			r, ok := records[string(ref)]
-			if !ok {
-				report("sessions", "points at %s, which is not there", ref)
-				return nil
-			}
-			if string(sessionKey(r.Result.Run.Session, r.Arrival)) != string(k) {
-				report("sessions", "%s stands under the wrong session", ref)
-			}
-			indexed[string(ref)]++
-			return nil
-		}); err != nil {
-			return err
+		if r.Result.Run.ID != r.ID {
+			c.report(where, "its document has the id %s", r.Result.Run.ID)
 		}
-		for k := range records {
-			if indexed[k] != 1 {
-				report("sessions", "%s stands there %d times", k, indexed[k])
-			}
+		if other, taken := arrivals[r.Arrival]; taken {
+			c.report(where, "has the same arrival as %s", other)
 		}
-
-		// What has yet to be announced is there.
-		if err := tx.Bucket(bucketUnannounced).ForEach(func(k, _ []byte) error {
-			if _, ok := records[string(k)]; !ok {
-				report("unannounced", "%s is not there", k)
-			}
-			return nil
-		}); err != nil {
-			return err
+		arrivals[r.Arrival] = string(k)
+		if r.Arrival == 0 || r.Arrival > b.Sequence() {
+			c.report(where, "arrival %d, but only %d have arrived", r.Arrival, b.Sequence())
 		}
-
-		// Every event belongs to a result that is there.
-		return tx.Bucket(bucketOutbox).ForEach(func(k, v []byte) error {
-			e, err := decode[Event](v)
-			if err != nil {
-				report("outbox "+string(k), "not an event: %v", err)
-				return nil
-			}
-			if _, ok := records[string(e.Run.key())]; !ok {
-				report("outbox "+string(k), "its result %s is not there", e.Run)
-			}
-			return nil
-		})
+		x := checked{Ref: r.Ref, paths: r.Paths, supersededBy: r.SupersededBy}
+		for _, i := range indexes {
+			x.indexKeys = append(x.indexKeys, string(i.key(r)))
+		}
+		c.results[string(k)] = x
+		return nil
 	})
-	return out, err
+}
+
+// Revisions of one id are numbered from 1 without a gap.
+func (c *checker) eachRevision(*bbolt.Tx) error {
+	for k, r := range c.results {
+		if r.Revision < 1 || r.Revision > 1 && !c.has(Ref{r.ID, r.Revision - 1}) {
+			c.report("results "+k, "the revision before it is missing")
+		}
+	}
+	return nil
+}
+
+// Every path can be read, stands under its own name, and leads through results
+// that are there to a current one that names it, no two in a row the same.
+func (c *checker) eachPath(tx *bbolt.Tx) error {
+	c.paths = map[string]Path{}
+	return tx.Bucket(bucketPaths).ForEach(func(k, v []byte) error {
+		where := fmt.Sprintf("paths %q", k)
+		p, err := decode[Path](k, v)
+		if err != nil {
+			c.report(where, "%v", err)
+			return nil
+		}
+		c.paths[string(k)] = p
+		if p.Path != string(k) {
+			c.report(where, "holds what is known of %q", p.Path)
+		}
+		history := append(slices.Clone(p.Earlier), p.Current)
+		for i, ref := range history {
+			if !c.has(ref) {
+				c.report(where, "points at %s, which is missing", ref)
+			}
+			if i > 0 && ref == history[i-1] {
+				c.report(where, "follows %s with itself", ref)
+			}
+		}
+		if r, ok := c.results[string(p.Current.key())]; ok && !slices.Contains(r.paths, string(k)) {
+			c.report(where, "its result %s does not name it", p.Current)
+		}
+		return nil
+	})
+}
+
+// A result names, once each, exactly the paths whose current result it is; it
+// is superseded, by another that is there, exactly when there are none.
+func (c *checker) eachName(*bbolt.Tx) error {
+	for k, r := range c.results {
+		for i, p := range r.paths {
+			if c.paths[p].Current != r.Ref {
+				c.report("results "+k, "names %q, whose current result is another", p)
+			}
+			if slices.Contains(r.paths[:i], p) {
+				c.report("results "+k, "names %q twice", p)
+			}
+		}
+		switch by := r.supersededBy; {
+		case (len(r.paths) == 0) != (by != nil):
+			c.report("results "+k, "has %d paths, superseded by %v", len(r.paths), by)
+		case by != nil && (!c.has(*by) || *by == r.Ref):
+			c.report("results "+k, "is superseded by %s, which is missing or itself", by)
+		}
+	}
+	return nil
+}
+
+// Every result stands in each index under its own key, and nothing else does.
+func (c *checker) eachIndex(tx *bbolt.Tx) error {
+	for i, x := range indexes {
+		where := string(x.bucket)
+		listed := map[string]bool{}
+		if err := tx.Bucket(x.bucket).ForEach(func(k, ref []byte) error {
+			r, ok := c.results[string(ref)]
+			switch {
+			case !ok:
+				c.report(where, "points at %q, which is missing", ref)
+			case r.indexKeys[i] != string(k):
+				c.report(where, "has %s under a wrong key", ref)
+			default:
+				listed[string(ref)] = true
+			}
+			return nil
+		}); err != nil {
+			return err
+		}
+		for k := range c.results {
+			if !listed[k] {
+				c.report(where, "lacks %s", k)
+			}
+		}
+	}
+	return nil
+}
+
+// What has yet to be announced is there.
+func (c *checker) eachUnannounced(tx *bbolt.Tx) error {
+	return tx.Bucket(bucketUnannounced).ForEach(func(k, _ []byte) error {
+		if _, ok := c.results[string(k)]; !ok {
+			c.report("unannounced", "%q is missing", k)
+		}
+		return nil
+	})
+}
+
+// Every event can be read, has the id it is filed under, and is of a result
+// that is there.
+func (c *checker) eachEvent(tx *bbolt.Tx) error {
+	return tx.Bucket(bucketOutbox).ForEach(func(k, v []byte) error {
+		where := "outbox " + string(k)
+		e, err := decode[Event](k, v)
+		if err != nil {
+			c.report(where, "%v", err)
+			return nil
+		}
+		if e.ID != string(k) || e.ID != eventID(e.Run, e.Kind) {
+			c.report(where, "has the id %s", e.ID)
+		}
+		if !c.has(e.Run) {
+			c.report(where, "its result %s is missing", e.Run)
+		}
+		return nil
+	})
+}
+
+// Every cell's document can be read and stands under its cell's name and
+// revision.
+func (c *checker) eachCellDocument(tx *bbolt.Tx) error {
+	b := tx.Bucket(bucketCellDocuments)
+	if b == nil {
+		return nil
+	}
+	return b.ForEach(func(k, v []byte) error {
+		where := "celldocuments " + string(k)
+		r, err := decode[CellRecord](k, v)
+		if err != nil {
+			c.report(where, "%v", err)
+			return nil
+		}
+		if want := fmt.Appendf(cellPrefix(r.Document.Session, r.Document.Cell), "%06d", r.Revision); string(want) != string(k) {
+			c.report(where, "holds revision %d of cell %q", r.Revision, r.Document.Cell)
+		}
+		return nil
+	})
 }

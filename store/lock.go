@@ -16,6 +16,7 @@ import (
 type LockedError struct {
 	Folder string
 	PID    int // 0 when not known
+	Host   string
 	Owner  string
 	Since  time.Time
 }
@@ -23,10 +24,11 @@ type LockedError struct {
 func (e *LockedError) Error() string {
 	who := "another process"
 	if e.PID != 0 {
-		who = fmt.Sprintf("process %d", e.PID)
+		who = fmt.Sprintf("process %d on %s", e.PID, e.Host)
 		if e.Owner != "" {
-			who += " (" + e.Owner + ", since " + e.Since.Local().Format("2006-01-02 15:04:05") + ")"
+			who += ", " + e.Owner
 		}
+		who += ", since " + e.Since.Local().Format("2006-01-02 15:04:05")
 	}
 	return fmt.Sprintf("the state folder %s is in use by %s: stop that one first, or give another folder with --state", e.Folder, who)
 }
@@ -34,7 +36,9 @@ func (e *LockedError) Error() string {
 // lock is the ownership of a state folder: an advisory lock on platen.lock,
 // which the system drops when the process dies, and beside it platen.owner,
 // which says whose it is. platen.owner is there at the start only where the
-// last owner did not end in order.
+// last owner did not end in order: it is also the mark of a store to be
+// checked. It is a file of its own because Windows lets nobody read a byte
+// that is locked.
 type lock struct {
 	flock *flock.Flock
 	owner string // path of platen.owner
@@ -42,38 +46,66 @@ type lock struct {
 
 type ownerNote struct {
 	PID   int       `json:"pid"`
+	Host  string    `json:"host"`
 	Owner string    `json:"owner"`
 	Since time.Time `json:"since"`
 }
 
+// takeLock takes the folder. clean tells that its last owner ended in order.
 func takeLock(folder, owner string) (l *lock, clean bool, err error) {
 	l = &lock{flock: flock.New(filepath.Join(folder, "platen.lock")), owner: filepath.Join(folder, "platen.owner")}
 	ok, err := l.flock.TryLock()
 	if err != nil {
-		return nil, false, fmt.Errorf("state folder %s: cannot be locked: %w: give a folder on a local disk that you may write to with --state", folder, err)
+		return nil, false, &FolderError{folder, err}
 	}
-	note, readErr := os.ReadFile(l.owner)
 	if !ok {
-		e := &LockedError{Folder: folder}
-		var n ownerNote
-		if readErr == nil && json.Unmarshal(note, &n) == nil {
-			e.PID, e.Owner, e.Since = n.PID, n.Owner, n.Since
-		}
-		return nil, false, e
+		return nil, false, l.whose(folder)
 	}
-	clean = errors.Is(readErr, fs.ErrNotExist)
-	text, err := json.Marshal(ownerNote{os.Getpid(), owner, time.Now()})
-	if err == nil {
-		err = os.WriteFile(l.owner, text, 0o600)
-	}
-	if err != nil {
-		l.flock.Unlock()
-		return nil, false, fmt.Errorf("state folder %s: %w: give a folder that you may write to with --state", folder, err)
+	_, err = os.Stat(l.owner)
+	clean = errors.Is(err, fs.ErrNotExist)
+	if err := l.sign(owner); err != nil {
+		return nil, false, errors.Join(&FolderError{folder, err}, l.release(clean))
 	}
 	return l, clean, nil
 }
 
-// release gives the folder free. clean says that the store was left in order.
+// sign writes the note and waits until it is on disk, so that also after a
+// power cut it tells that the store was in use.
+func (l *lock) sign(owner string) error {
+	host, err := os.Hostname()
+	if err != nil {
+		host = "this computer"
+	}
+	text, err := json.Marshal(ownerNote{os.Getpid(), host, owner, time.Now()})
+	if err != nil {
+		return err
+	}
+	f, err := os.OpenFile(l.owner, os.O_WRONLY|os.O_CREATE|os.O_TRUNC, 0o600)
+	if err != nil {
+		return err
+	}
+	_, err = f.Write(text)
+	if err = errors.Join(err, f.Sync(), f.Close()); err != nil {
+		return err
+	}
+	return syncFolder(filepath.Dir(l.owner))
+}
+
+// whose reads who has the folder. An owner that has only just taken it may
+// still be writing its note.
+func (l *lock) whose(folder string) error {
+	for range 20 {
+		var n ownerNote
+		text, err := os.ReadFile(l.owner)
+		if err == nil && json.Unmarshal(text, &n) == nil {
+			return &LockedError{folder, n.PID, n.Host, n.Owner, n.Since}
+		}
+		time.Sleep(10 * time.Millisecond)
+	}
+	return &LockedError{Folder: folder}
+}
+
+// release gives the folder free. clean says that the store is in order.
 func (l *lock) release(clean bool) error {
 	var err error
 	if clean {

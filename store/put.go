@@ -2,53 +2,17 @@ package store
 
 import (
 	"bytes"
-	"encoding/binary"
+	"encoding/hex"
 	"encoding/json"
+	"errors"
 	"fmt"
 	"slices"
-	"time"
+	"strings"
 
 	"go.etcd.io/bbolt"
 
 	"platen/pipeline/run"
 )
-
-// Ref names one revision of one result.
-type Ref struct {
-	ID       string `json:"id"`
-	Revision int    `json:"revision"` // from 1
-}
-
-func (r Ref) key() []byte { return fmt.Appendf(nil, "%s/%06d", r.ID, r.Revision) }
-
-// String is the form in which a revision is named to people.
-func (r Ref) String() string {
-	id := r.ID
-	if len(id) > 12 {
-		id = id[:12]
-	}
-	return fmt.Sprintf("%s/%d", id, r.Revision)
-}
-
-// Record is a stored result with what became of it.
-type Record struct {
-	Ref
-	Arrival      uint64     `json:"arrival"` // order in which results were stored
-	Stored       time.Time  `json:"stored"`
-	Paths        []string   `json:"paths"` // files whose current result this is
-	SupersededBy *Ref       `json:"superseded_by,omitempty"`
-	Result       run.Result `json:"result"`
-}
-
-// Path is what is known of a run file.
-type Path struct {
-	Path        string `json:"path"`
-	Size        int64  `json:"size"`
-	ModTimeNs   int64  `json:"mtime_ns"`
-	Fingerprint string `json:"fingerprint"` // of its first and last bytes
-	Current     Ref    `json:"current"`
-	Earlier     []Ref  `json:"earlier,omitempty"` // oldest first
-}
 
 // Entry is a result to be stored, with the file it was made from.
 type Entry struct {
@@ -62,139 +26,223 @@ type Entry struct {
 // Stored tells what became of an Entry.
 type Stored struct {
 	Ref
-	New        bool // false where the very same document was there already
-	Supersedes *Ref // the file's former result, where it had one
+	// New tells that there is a verdict to announce: the document was not there
+	// yet, or it had been superseded and is current again. It is false where
+	// the very same was there already, under this path or another.
+	New        bool
+	Supersedes *Ref // the file's former result, where it had another one
 }
 
 // Put stores results in one transaction: documents, paths, the marks that they
 // have yet to be announced, and an outbox event for each run to repeat. When it
-// returns without error, all of it is on disk; otherwise none is.
+// returns without error, all of it is on disk; otherwise none of it counts as
+// stored and all may be put again.
 func (s *Store) Put(entries ...Entry) ([]Stored, error) {
-	out := make([]Stored, len(entries))
+	prepared := make([]document, len(entries))
+	for i, e := range entries {
+		var err error
+		if prepared[i], err = prepareDocument(e); err != nil {
+			return nil, fmt.Errorf("the result of %q cannot be stored: %w", e.Path, err)
+		}
+	}
+	if len(entries) == 0 {
+		return nil, nil
+	}
+	var p putting
 	err := s.update(func(tx *bbolt.Tx) error {
-		for i, e := range entries {
-			var err error
-			if out[i], err = s.putOne(tx, e); err != nil {
-				return fmt.Errorf("storing the result of %s: %w", e.Path, err)
+		p = putting{tx: tx, store: s}
+		for _, d := range prepared {
+			if err := p.one(d); err != nil {
+				return fmt.Errorf("storing the result of %q: %w", d.Path, err)
 			}
+		}
+		if !p.changed {
+			return errNothingNew
 		}
 		return nil
 	})
-	if err != nil {
+	if err != nil && !errors.Is(err, errNothingNew) {
+		s.remember(p.out)
 		return nil, err
 	}
-	return out, nil
+	s.recall(p.out)
+	return p.out, nil
 }
 
-func (s *Store) putOne(tx *bbolt.Tx, e Entry) (Stored, error) {
-	ref, isNew, err := s.putResult(tx, e)
-	if err != nil {
-		return Stored{}, err
-	}
-	st := Stored{Ref: ref, New: isNew}
-	paths := tx.Bucket(bucketPaths)
-	p := Path{Path: e.Path}
-	if v := paths.Get([]byte(e.Path)); v != nil {
-		if p, err = decode[Path](v); err != nil {
-			return Stored{}, err
+// errNothingNew ends a transaction that would write what is there already.
+var errNothingNew = errors.New("nothing new")
+
+// remember notes the results of a transaction that failed. Its last write may
+// have reached the disk all the same: then the next attempt finds them there,
+// but they are still news to the caller.
+func (s *Store) remember(failed []Stored) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	for _, st := range failed {
+		if st.New && s.unsure != nil {
+			s.unsure[st.Ref] = true
 		}
 	}
-	former := p.Current
-	p.Size, p.ModTimeNs, p.Fingerprint, p.Current = e.Size, e.ModTimeNs, e.Fingerprint, ref
-	if former.ID != "" && former != ref {
-		p.Earlier = append(p.Earlier, former)
-		st.Supersedes = &former
-		if err := s.leave(tx, former, e.Path, ref); err != nil {
-			return Stored{}, err
-		}
-	}
-	return st, put(paths, []byte(e.Path), p)
 }
 
-// putResult stores the document unless the same is there, and returns its
-// revision.
-func (s *Store) putResult(tx *bbolt.Tx, e Entry) (ref Ref, isNew bool, err error) {
-	results := tx.Bucket(bucketResults)
+func (s *Store) recall(stored []Stored) {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	for i, st := range stored {
+		if s.unsure[st.Ref] {
+			stored[i].New = true
+			delete(s.unsure, st.Ref)
+		}
+	}
+}
+
+// document is an entry whose result has been through JSON and back, as the one
+// it is compared with has.
+type document struct {
+	Entry
+	comparable []byte
+}
+
+func prepareDocument(e Entry) (document, error) {
+	if e.Path == "" || strings.Contains(e.Path, "\x00") || len(e.Path) > bbolt.MaxKeySize {
+		return document{}, errors.New("it needs the path of its file")
+	}
 	id := e.Result.Run.ID
-	prefix := []byte(id + "/")
-	last := 0
-	c := results.Cursor()
-	for k, v := c.Seek(prefix); k != nil && bytes.HasPrefix(k, prefix); k, v = c.Next() {
-		r, err := decode[Record](v)
-		if err != nil {
-			return Ref{}, false, err
-		}
-		last = r.Revision
-		same, err := sameDocument(r.Result, e.Result)
-		if err != nil {
-			return Ref{}, false, err
-		}
-		if !same {
-			continue
-		}
-		if !slices.Contains(r.Paths, e.Path) {
-			r.Paths = append(r.Paths, e.Path)
-			r.SupersededBy = nil
-			if err := put(results, slices.Clone(k), r); err != nil {
-				return Ref{}, false, err
-			}
-		}
-		return r.Ref, false, nil
+	if b, err := hex.DecodeString(id); err != nil || len(b) != 32 || strings.ToLower(id) != id {
+		return document{}, fmt.Errorf("its id %q is no SHA-256 in lower-case hexadecimal", id)
 	}
-	arrival, err := results.NextSequence()
+	text, err := json.Marshal(e.Result)
 	if err != nil {
-		return Ref{}, false, err
+		return document{}, err
 	}
-	r := Record{Ref: Ref{id, last + 1}, Arrival: arrival, Stored: s.now().UTC(), Paths: []string{e.Path}, Result: e.Result}
-	if err := put(results, r.key(), r); err != nil {
-		return Ref{}, false, err
+	d := document{Entry: e}
+	d.Result = run.Result{}
+	if err := json.Unmarshal(text, &d.Result); err != nil {
+		return document{}, err
 	}
-	if err := tx.Bucket(bucketSessions).Put(sessionKey(e.Result.Run.Session, arrival), r.key()); err != nil {
-		return Ref{}, false, err
-	}
-	if err := tx.Bucket(bucketUnannounced).Put(r.key(), []byte{}); err != nil {
-		return Ref{}, false, err
-	}
-	if e.Result.Verdict == run.Repeat {
-		ev := Event{ID: string(r.key()) + "/repeat", Kind: "repeat", Run: r.Ref, At: r.Stored}
-		if err := put(tx.Bucket(bucketOutbox), []byte(ev.ID), ev); err != nil {
-			return Ref{}, false, err
-		}
-	}
-	return r.Ref, true, nil
+	d.comparable, err = comparable(d.Result)
+	return d, err
 }
 
-// leave takes a path off its former result.
-func (s *Store) leave(tx *bbolt.Tx, former Ref, path string, next Ref) error {
-	results := tx.Bucket(bucketResults)
-	v := results.Get(former.key())
-	if v == nil {
-		return fmt.Errorf("the former result %s is not there", former)
-	}
-	r, err := decode[Record](v)
+// comparable is the document without the name of the file: the same bytes under
+// another name are the same result.
+func comparable(r run.Result) ([]byte, error) {
+	r.Run.File = ""
+	return json.Marshal(r)
+}
+
+// putting is one transaction of Put.
+type putting struct {
+	tx      *bbolt.Tx
+	store   *Store
+	out     []Stored
+	changed bool
+}
+
+func (p *putting) one(d document) error {
+	r, st, err := p.result(d)
 	if err != nil {
 		return err
 	}
-	r.Paths = slices.DeleteFunc(r.Paths, func(p string) bool { return p == path })
+	paths, key := p.tx.Bucket(bucketPaths), []byte(d.Path)
+	var former Path
+	if paths.Get(key) != nil {
+		if former, err = get[Path](paths, key); err != nil {
+			return err
+		}
+	}
+	now := Path{d.Path, d.Size, d.ModTimeNs, d.Fingerprint, r.Ref, former.Earlier}
+	if former.Path != "" && former.Current != r.Ref {
+		now.Earlier = append(now.Earlier, former.Current)
+		st.Supersedes = &former.Current
+		if err := p.leave(former.Current, d.Path, r.Ref); err != nil {
+			return err
+		}
+	}
+	p.out = append(p.out, st)
+	was, err := json.Marshal(former)
+	if err != nil {
+		return err
+	}
+	if is, err := json.Marshal(now); err != nil || bytes.Equal(was, is) {
+		return err
+	}
+	p.changed = true
+	return put(paths, key, now)
+}
+
+// result finds the document among the revisions of its id, or adds it, and
+// makes it the current one of the path.
+func (p *putting) result(d document) (Record, Stored, error) {
+	results := p.tx.Bucket(bucketResults)
+	id := d.Result.Run.ID
+	last := 0
+	prefix := []byte(id + "/")
+	c := results.Cursor()
+	for k, v := c.Seek(prefix); bytes.HasPrefix(k, prefix); k, v = c.Next() {
+		r, err := decode[Record](k, v)
+		if err != nil {
+			return Record{}, Stored{}, err
+		}
+		last = r.Revision
+		there, err := comparable(r.Result)
+		if err != nil {
+			return Record{}, Stored{}, err
+		}
+		if !bytes.Equal(there, d.comparable) {
+			continue
+		}
+		if slices.Contains(r.Paths, d.Path) {
+			return r, Stored{Ref: r.Ref}, nil
+		}
+		again := r.SupersededBy != nil
+		r.Paths, r.SupersededBy = append(r.Paths, d.Path), nil
+		p.changed = true
+		err = put(results, r.key(), r)
+		if err == nil && again {
+			err = p.due(r)
+		}
+		return r, Stored{Ref: r.Ref, New: again}, err
+	}
+	arrival, err := results.NextSequence()
+	if err != nil {
+		return Record{}, Stored{}, err
+	}
+	r := Record{Ref: Ref{id, last + 1}, Arrival: arrival, Stored: p.store.now().UTC(), Paths: []string{d.Path}, Result: d.Result}
+	p.changed = true
+	err = put(results, r.key(), r)
+	if err == nil {
+		err = enterIndexes(p.tx, r)
+	}
+	if err == nil {
+		err = p.due(r)
+	}
+	return r, Stored{Ref: r.Ref, New: true}, err
+}
+
+// due marks a result as to be announced, and as to be alerted of where the run
+// is to be repeated.
+func (p *putting) due(r Record) error {
+	if err := p.tx.Bucket(bucketUnannounced).Put(r.key(), nil); err != nil {
+		return err
+	}
+	if r.Result.Verdict != run.Repeat {
+		return nil
+	}
+	return addEvent(p.tx, r.Ref, "repeat", p.store.now().UTC())
+}
+
+// leave takes a path off its former result.
+func (p *putting) leave(former Ref, path string, next Ref) error {
+	results := p.tx.Bucket(bucketResults)
+	r, err := get[Record](results, former.key())
+	if err != nil {
+		return err
+	}
+	r.Paths = slices.DeleteFunc(r.Paths, func(name string) bool { return name == path })
 	if len(r.Paths) == 0 {
 		r.SupersededBy = &next
 	}
+	p.changed = true
 	return put(results, former.key(), r)
-}
-
-// sameDocument compares two documents but for the name of the file: the same
-// bytes under another name are the same result.
-func sameDocument(a, b run.Result) (bool, error) {
-	a.Run.File, b.Run.File = "", ""
-	x, err := json.Marshal(a)
-	if err != nil {
-		return false, err
-	}
-	y, err := json.Marshal(b)
-	return bytes.Equal(x, y), err
-}
-
-func sessionKey(session string, arrival uint64) []byte {
-	k := append([]byte(session), 0)
-	return binary.BigEndian.AppendUint64(k, arrival)
 }

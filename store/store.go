@@ -4,75 +4,97 @@
 // which stores results in one transaction. Read opens the same file for a
 // look while a service runs.
 //
-// The file platen.db holds these buckets (values are JSON):
+// The state folder holds platen.db, platen.lock (held as long as a service
+// has the folder) and platen.owner (who that is; left behind by a crash).
+// platen.db has these buckets; a value is JSON, a line end, and the CRC-32C of
+// key and JSON in hexadecimal, so that a spoiled value is never taken for a
+// result:
 //
-//	meta         schema number
+//	meta         "schema" -> number of this layout
 //	results      "<id>/<revision>" -> Record: the document and what became of it
 //	paths        path of a run file -> Path: size, time, current and earlier results
-//	sessions     "<session> NUL <arrival>" -> key in results
-//	unannounced  key in results -> "": committed, but not yet said on the console
-//	outbox       "<event id>" -> Event: alerts due
+//	sessions     "<session> NUL <start> <arrival>" -> key in results
+//	cells        "<cell> NUL <start> <arrival>" -> key in results
+//	verdicts     "<verdict> NUL <start> <arrival>" -> key in results
+//	starts       "NUL <start> <arrival>" -> key in results
+//	unannounced  key in results -> nothing: committed, but not yet said on the console
+//	outbox       "<id>/<revision>/<kind>" -> Event: alerts due
+//	celldocuments  "<hash of session and cell>/<revision>" -> CellRecord; made when first needed
 //
 // The id of a result is the SHA-256 of the run's bytes. Documents that differ
 // though the bytes are the same (other settings, another version) are further
 // revisions of one id. A path points at its current result and keeps the
-// earlier ones; the same bytes under two names are one result.
+// earlier ones; the same bytes under two names are one result. A result is
+// superseded once no path has it as its current one.
 //
 // Invariants kept here:
 //   - What Put has returned is on disk; what it has not returned is wholly
 //     there or wholly absent.
 //   - Storing the same thing again changes nothing.
-//   - A store that cannot be understood is never changed.
+//   - A store that cannot be understood is never changed, and never emptied.
+//   - Damage to the file is an error, never a crash and never a wrong result.
 //
 // The file is opened for each transaction and closed after it, so that others
-// can read between commits: a bbolt file is locked as long as it is open. Who
-// owns the state folder is settled by a lock file of its own, held all along.
+// can read between commits: bbolt locks a file as long as it is open. This
+// costs less than a commit does (BenchmarkOpenPerCommit). Who owns the state
+// folder is settled by a lock file of its own, held all along.
+//
+// Left out: free space and write permission before a commit (platen
+// preflight), delivery of events (watcher/alert), archives (store/archive).
 package store
 
 import (
-	"encoding/json"
 	"errors"
 	"fmt"
 	"io/fs"
 	"os"
 	"path/filepath"
+	"runtime/debug"
+	"sync"
+	"sync/atomic"
 	"time"
 
 	"go.etcd.io/bbolt"
 )
 
-// schema is the number of the layout described above. A newer program raises
-// it and migrates; an older one refuses.
-const schema = 1
-
-var (
-	bucketMeta        = []byte("meta")
-	bucketResults     = []byte("results")
-	bucketPaths       = []byte("paths")
-	bucketSessions    = []byte("sessions")
-	bucketUnannounced = []byte("unannounced")
-	bucketOutbox      = []byte("outbox")
-
-	keySchema = []byte("schema")
-)
-
 // Store is an open state folder. Its methods may be called from several
 // goroutines.
 type Store struct {
-	folder   string
-	lock     *lock // nil when only reading
-	now      func() time.Time
-	openWait time.Duration
+	folder string
+	lock   *lock // nil when only reading
+	now    func() time.Time
+	aside  string
+	file   dbFile
+
+	mu      sync.RWMutex // held for writing by a transaction that writes
+	closed  bool
+	damaged atomic.Pointer[DamagedError] // set for good once damage has been met
+	doubt   bool                         // the last commit failed: check before the next
+	unsure  map[Ref]bool                 // results of failed commits, which may be there all the same
 }
 
-// Options are the choices of Open. The zero value is usable.
-type Options struct {
-	Owner string           // what the owner of the folder does, for others to read
-	Now   func() time.Time // clock; default time.Now
+// dbFile is how the database file is reached; tests make its steps fail.
+type dbFile struct {
+	path   string
+	wait   time.Duration // for others who have it open
+	open   func(name string, flag int, perm os.FileMode) (*os.File, error)
+	commit func(*bbolt.DB, func(*bbolt.Tx) error) error
 }
 
-// ErrNewer says that the store was written by a newer version of the program.
-var ErrNewer = errors.New("the store was written by a newer version of platen: use that version, or give another state folder with --state")
+func dbFileIn(folder string) dbFile {
+	return dbFile{
+		path:   filepath.Join(folder, "platen.db"),
+		wait:   10 * time.Second,
+		open:   os.OpenFile,
+		commit: (*bbolt.DB).Update,
+	}
+}
+
+// ErrClosed says that the store has been closed.
+var ErrClosed = errors.New("the store is closed")
+
+// ErrReadOnly says that a store opened with Read was to be changed.
+var ErrReadOnly = errors.New("the store was opened for reading only")
 
 // DamagedError says that the store cannot be understood. It has not been
 // changed.
@@ -82,179 +104,148 @@ type DamagedError struct {
 }
 
 func (e *DamagedError) Error() string {
-	return fmt.Sprintf("the store %s is damaged (%s); nothing was changed: move it aside (for instance rename it to %s.damaged) and start again, platen then analyses the files that are still in the export folder anew",
+	return fmt.Sprintf("the store %s is damaged (%s); nothing was changed: keep it by renaming it (for instance to %s.damaged) and start again, platen then analyses the files that are still in the export folder anew",
 		e.File, e.Reason, filepath.Base(e.File))
 }
 
-// Open takes the state folder for this process, makes the store if there is
-// none, and checks one that was not closed in order. A *LockedError names the
-// process that has the folder already.
-func Open(folder string, o Options) (*Store, error) {
-	if err := os.MkdirAll(folder, 0o700); err != nil {
-		return nil, fmt.Errorf("state folder: %w: give a folder that you may write to with --state", err)
-	}
-	l, clean, err := takeLock(folder, o.Owner)
-	if err != nil {
-		return nil, err
-	}
-	s := &Store{folder: folder, lock: l, now: o.Now, openWait: 10 * time.Second}
-	if s.now == nil {
-		s.now = time.Now
-	}
-	if err := s.prepare(clean); err != nil {
-		l.release(false)
-		return nil, err
-	}
-	return s, nil
-}
+// damage is met inside a transaction; it leaves the package as a DamagedError.
+type damage string
 
-// Read gives access to a store without owning it, also while a service does.
-// Only the methods that read may be called. It fails with fs.ErrNotExist where
-// nothing has been stored yet.
-func Read(folder string) (*Store, error) {
-	s := &Store{folder: folder, openWait: 10 * time.Second, now: time.Now}
-	if _, err := os.Stat(s.file()); err != nil {
-		if errors.Is(err, fs.ErrNotExist) {
-			return nil, fmt.Errorf("no results yet in %s: %w", folder, fs.ErrNotExist)
-		}
-		return nil, err
-	}
-	return s, s.view(func(tx *bbolt.Tx) error { return checkSchema(tx) })
-}
+func (d damage) Error() string { return string(d) }
 
-// Close gives the state folder free.
-func (s *Store) Close() error {
-	if s.lock == nil {
-		return nil
-	}
-	return s.lock.release(true)
-}
+func damagef(format string, args ...any) error { return damage(fmt.Sprintf(format, args...)) }
 
 // Folder returns the state folder.
 func (s *Store) Folder() string { return s.folder }
 
-func (s *Store) file() string { return filepath.Join(s.folder, "platen.db") }
-
-// prepare makes the buckets, or checks those that are there.
-func (s *Store) prepare(clean bool) error {
-	info, err := os.Stat(s.file())
-	switch {
-	case errors.Is(err, fs.ErrNotExist):
-	case err != nil:
-		return fmt.Errorf("store: %w", err)
-	case !info.Mode().IsRegular():
-		return fmt.Errorf("store: %s is not a regular file: move it away, or give another state folder with --state", s.file())
-	default:
-		// Look before writing: a store that is newer or damaged stays as it is.
-		if err := s.view(checkSchema); err != nil {
-			return err
-		}
-		if !clean {
-			problems, err := s.Check()
-			if err != nil {
-				return err
-			}
-			if len(problems) > 0 {
-				return &DamagedError{s.file(), problems[0].String()}
-			}
-		}
-		return nil
+// update runs one transaction that writes. After it returns without error,
+// everything in it is on disk.
+func (s *Store) update(do func(*bbolt.Tx) error) error {
+	if s.lock == nil {
+		return ErrReadOnly
 	}
-	return s.update(func(tx *bbolt.Tx) error {
-		for _, b := range [][]byte{bucketMeta, bucketResults, bucketPaths, bucketSessions, bucketUnannounced, bucketOutbox} {
-			if _, err := tx.CreateBucketIfNotExists(b); err != nil {
-				return err
-			}
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	if err := s.usable(); err != nil {
+		return err
+	}
+	// A commit that failed may have left the file in any state that the
+	// system's cache and the disk do not agree on.
+	if s.doubt {
+		problems, err := s.check()
+		if err == nil && len(problems) > 0 {
+			err = s.isDamaged(problems[0].String())
 		}
-		return tx.Bucket(bucketMeta).Put(keySchema, fmt.Appendf(nil, "%d", schema))
+		if err != nil {
+			return fmt.Errorf("looking at the store after a failed commit: %w", err)
+		}
+		s.doubt = false
+	}
+	ready := false
+	err := s.with(false, func(db *bbolt.DB) error {
+		return s.file.commit(db, func(tx *bbolt.Tx) error {
+			err := do(tx)
+			ready = err == nil
+			return err
+		})
 	})
+	if ready && err != nil {
+		s.doubt = true
+		return fmt.Errorf("the commit failed, nothing of it counts as stored: %w: is the disk full or failing?", err)
+	}
+	return err
 }
 
-func checkSchema(tx *bbolt.Tx) error {
-	b := tx.Bucket(bucketMeta)
-	if b == nil {
-		return errors.New("it has no meta bucket")
+// view runs one transaction that reads. It should be brief: nobody can commit
+// meanwhile.
+func (s *Store) view(do func(*bbolt.Tx) error) error {
+	s.mu.RLock()
+	defer s.mu.RUnlock()
+	if err := s.usable(); err != nil {
+		return err
 	}
-	var n int
-	if _, err := fmt.Sscanf(string(b.Get(keySchema)), "%d", &n); err != nil {
-		return fmt.Errorf("its schema number %q is no number", b.Get(keySchema))
+	return s.look(do)
+}
+
+func (s *Store) look(do func(*bbolt.Tx) error) error {
+	return s.with(true, func(db *bbolt.DB) error { return db.View(do) })
+}
+
+func (s *Store) usable() error {
+	if s.closed {
+		return ErrClosed
 	}
-	if n > schema {
-		return ErrNewer
-	}
-	for _, name := range [][]byte{bucketResults, bucketPaths, bucketSessions, bucketUnannounced, bucketOutbox} {
-		if tx.Bucket(name) == nil {
-			return fmt.Errorf("it has no bucket %s", name)
-		}
+	if e := s.damaged.Load(); e != nil {
+		return e
 	}
 	return nil
 }
 
-// update runs one transaction that writes. After it returns without error,
-// everything in it is on disk.
-func (s *Store) update(do func(*bbolt.Tx) error) error {
-	return s.with(false, func(db *bbolt.DB) error { return db.Update(do) })
+func (s *Store) isDamaged(reason string) error {
+	e := &DamagedError{s.file.path, reason}
+	s.damaged.Store(e)
+	return e
 }
 
-// view runs one transaction that reads.
-func (s *Store) view(do func(*bbolt.Tx) error) error {
-	return s.with(true, func(db *bbolt.DB) error {
-		err := db.View(do)
-		var newer bool
-		if newer = errors.Is(err, ErrNewer); err != nil && !newer {
-			var own *ownError
-			if !errors.As(err, &own) {
-				return &DamagedError{s.file(), err.Error()}
-			}
-		}
-		return err
-	})
-}
-
-// ownError marks an error that is no sign of damage.
-type ownError struct{ err error }
-
-func (e *ownError) Error() string { return e.err.Error() }
-func (e *ownError) Unwrap() error { return e.err }
-
-// with opens the file for one transaction. bbolt panics on some kinds of
-// damage; that is an error here.
+// with opens the file for one transaction. On damaged pages bbolt panics or
+// reads where no memory is; both are errors here.
 func (s *Store) with(readOnly bool, do func(*bbolt.DB) error) (err error) {
+	var file *os.File
+	var size int64
+	defer debug.SetPanicOnFault(debug.SetPanicOnFault(true))
 	defer func() {
 		if p := recover(); p != nil {
-			err = &DamagedError{s.file(), fmt.Sprint(p)}
+			// bbolt's own Close could wait for ever for locks that the panic
+			// left taken; closing the file gives it free for others.
+			if file != nil {
+				file.Close()
+			}
+			err = s.isDamaged(fmt.Sprint(p))
 		}
 	}()
-	db, err := bbolt.Open(s.file(), 0o600, &bbolt.Options{Timeout: s.openWait, ReadOnly: readOnly, FreelistType: bbolt.FreelistMapType})
-	switch {
-	case err == nil:
-	case errors.Is(err, bbolt.ErrTimeout):
-		return fmt.Errorf("store %s: another program keeps it open: close that program", s.file())
-	case errors.Is(err, fs.ErrPermission), errors.Is(err, fs.ErrNotExist):
-		return fmt.Errorf("store: %w", err)
-	case errors.Is(err, bbolt.ErrInvalid), errors.Is(err, bbolt.ErrChecksum), errors.Is(err, bbolt.ErrVersionMismatch):
-		return &DamagedError{s.file(), err.Error()}
-	default:
-		return fmt.Errorf("store %s: %w", s.file(), err)
-	}
-	defer func() {
+	db, err := bbolt.Open(s.file.path, 0o600, &bbolt.Options{
+		Timeout: s.file.wait, ReadOnly: readOnly, FreelistType: bbolt.FreelistMapType,
+		OpenFile: func(name string, flag int, perm os.FileMode) (*os.File, error) {
+			// bbolt would make a store where there is none and fill an empty
+			// file: both would be a store emptied in silence.
+			f, err := s.file.open(name, flag&^os.O_CREATE, perm)
+			if err != nil {
+				return nil, err
+			}
+			info, err := f.Stat()
+			switch {
+			case err != nil:
+			case !info.Mode().IsRegular():
+				err = damage("it is not a regular file")
+			case info.Size() == 0:
+				err = damage("it is empty")
+			}
+			if err != nil {
+				f.Close()
+				return nil, err
+			}
+			file, size = f, info.Size()
+			return f, nil
+		},
+	})
+	if err == nil {
+		err = do(db)
 		if cerr := db.Close(); err == nil && cerr != nil {
-			err = fmt.Errorf("store %s: %w", s.file(), cerr)
+			err = fmt.Errorf("store %s: %w", s.file.path, cerr)
 		}
-	}()
-	return do(db)
-}
-
-func decode[T any](v []byte) (T, error) {
-	var x T
-	err := json.Unmarshal(v, &x)
-	return x, err
-}
-
-func put(b *bbolt.Bucket, key []byte, x any) error {
-	v, err := json.Marshal(x)
-	if err != nil {
-		return err
+	} else if errors.Is(err, bbolt.ErrInvalid) || errors.Is(err, bbolt.ErrChecksum) || errors.Is(err, bbolt.ErrVersionMismatch) {
+		err = damage(err.Error())
+	} else if errors.Is(err, bbolt.ErrTimeout) {
+		err = fmt.Errorf("store %s: another program keeps it open: close that program", s.file.path)
+	} else if file != nil && size < int64(4*os.Getpagesize()) {
+		err = damagef("it is cut short: %d bytes", size) // bbolt begins with 4 pages
+	} else if errors.Is(err, fs.ErrNotExist) {
+		err = fmt.Errorf("the store has vanished: %w: put it back, or stop platen and start it again to make a new one", err)
+	} else if d := damage(""); !errors.As(err, &d) {
+		err = fmt.Errorf("store: %w", err)
 	}
-	return b.Put(key, v)
+	if d := damage(""); errors.As(err, &d) {
+		return s.isDamaged(err.Error())
+	}
+	return err
 }
