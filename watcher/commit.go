@@ -5,6 +5,7 @@ import (
 	"sync"
 	"time"
 
+	"platen/pipeline/run"
 	"platen/store"
 	"platen/watcher/sessionlog"
 )
@@ -21,6 +22,7 @@ type committer struct {
 	store Store
 	log   *sessionlog.Log
 	wake  chan struct{}
+	after func(run.Result) // called with each result that is stored and new; may be nil
 
 	mu     sync.Mutex
 	queue  []commit
@@ -142,6 +144,9 @@ func (c *committer) storeAndSay(batch []commit) error {
 		}
 		c.log.Verdict(batch[i].entry.Result, s.Revision, supersedes)
 		said = append(said, s.Ref)
+		if c.after != nil {
+			c.after(batch[i].entry.Result)
+		}
 	}
 	if len(said) == 0 {
 		return nil

@@ -62,6 +62,8 @@ type Config struct {
 	Sweep   time.Duration
 	Include []string
 	Exclude []string
+
+	Cells *Cells // makes the documents of cells; nil for none
 }
 
 // Service follows one export folder.
@@ -153,6 +155,11 @@ func (s *Service) Run(ctx context.Context) error {
 	work := make(chan *follower)
 	done := make(chan *follower)
 	s.commits = newCommitter(s.c.Store, s.c.Log)
+	if s.c.Cells != nil {
+		s.c.Cells.wake = make(chan struct{}, 1)
+		s.commits.after = s.c.Cells.ran
+		all.Go(func() { s.c.Cells.run(ctx) })
+	}
 	all.Go(func() { s.folder.Run(ctx, batches) })
 	// What the workers still finish when the service ends is stored too.
 	commitCtx, endCommits := context.WithCancel(context.WithoutCancel(ctx))
@@ -335,7 +342,7 @@ func (s *Service) keep(stored []commit) {
 }
 
 func (s *Service) idle() bool {
-	if !s.swept || s.working > 0 || s.commits.waiting() > 0 {
+	if !s.swept || s.working > 0 || s.commits.waiting() > 0 || s.c.Cells.waiting() {
 		return false
 	}
 	for _, f := range s.files {

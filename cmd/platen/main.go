@@ -50,6 +50,8 @@ type commandLine struct {
 	Check     checkCommand     `cmd:"" help:"Analyse finished run files and print what was found. Stores nothing."`
 	Rehearse  rehearseCommand  `cmd:"" help:"A simulated rig writes a session of about a minute while the real service follows it."`
 	Results   resultsCommand   `cmd:"" help:"List what is stored."`
+	Cells     cellsCommand     `cmd:"" help:"Show what the runs of each cell tell together, and which further run would help."`
+	Compare   compareCommand   `cmd:"" help:"Compare conditions over the stored cells."`
 	Preflight preflightCommand `cmd:"" help:"Say whether this machine and these settings are fit for a session, and how to mend what is not."`
 	Version   versionCommand   `cmd:"" help:"Print the version."`
 }

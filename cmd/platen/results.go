@@ -35,17 +35,7 @@ Examples: platen results --verdict repeat
 }
 
 func (c resultsCommand) Run(to streams) error {
-	state := c.State
-	if state == "" {
-		var err error
-		if state, err = stateFolder(); err != nil {
-			return err
-		}
-	}
-	st, err := store.Read(state)
-	if errors.Is(err, fs.ErrNotExist) {
-		return fmt.Errorf("%w: start platen watch first, or name another state folder with --state", err)
-	}
+	st, err := readStore(c.State)
 	if err != nil {
 		return err
 	}
@@ -78,6 +68,22 @@ func (c resultsCommand) Run(to streams) error {
 		return table(out, records)
 	}
 	return nil
+}
+
+// readStore opens the store of a state folder, "" for the platform's, for
+// looking.
+func readStore(state string) (*store.Store, error) {
+	if state == "" {
+		var err error
+		if state, err = stateFolder(); err != nil {
+			return nil, err
+		}
+	}
+	st, err := store.Read(state)
+	if errors.Is(err, fs.ErrNotExist) {
+		return nil, fmt.Errorf("%w: start platen watch first, or name another state folder with --state", err)
+	}
+	return st, err
 }
 
 func fate(r store.Record) string {

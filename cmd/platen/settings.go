@@ -14,6 +14,7 @@ import (
 	"github.com/pelletier/go-toml/v2"
 
 	"platen/pipeline"
+	"platen/pipeline/cell"
 	"platen/qc"
 )
 
@@ -23,6 +24,7 @@ type settings struct {
 	Watch    watchSettings     `toml:"watch"`
 	Analysis pipeline.Settings `toml:"analysis"`
 	Limits   qc.Limits         `toml:"limits"`
+	Cells    cell.Settings     `toml:"cells"`
 	Log      logSettings       `toml:"log"`
 
 	file string // where they came from, "" for the defaults
@@ -58,6 +60,7 @@ func defaultSettings() settings {
 		},
 		Analysis: pipeline.Defaults(),
 		Limits:   qc.Defaults(),
+		Cells:    cell.Defaults(),
 		Log:      logSettings{MaxSizeMB: 10, Keep: 20},
 	}
 }
@@ -125,6 +128,9 @@ func (s *settings) validate() error {
 	if err := s.Limits.Validate(); err != nil {
 		return err
 	}
+	if err := s.Cells.Validate(); err != nil {
+		return err
+	}
 	for _, c := range []struct {
 		key    string
 		v      float64
@@ -153,10 +159,18 @@ func (s *settings) validate() error {
 // fingerprint identifies the settings on which a result depends; those of the
 // watching and the log do not change a result.
 func (s *settings) fingerprint() string {
-	text, err := json.Marshal(struct {
+	return fingerprintOf(struct {
 		Analysis pipeline.Settings
 		Limits   qc.Limits
 	}{s.Analysis, s.Limits})
+}
+
+// cellFingerprint identifies those on which a cell's document depends beside
+// the results that it is made from.
+func (s *settings) cellFingerprint() string { return fingerprintOf(s.Cells) }
+
+func fingerprintOf(x any) string {
+	text, err := json.Marshal(x)
 	if err != nil {
 		panic(err) // numbers that passed validate always encode
 	}

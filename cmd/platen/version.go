@@ -21,3 +21,8 @@ func (versionCommand) Run(to streams) error {
 func (s *settings) software() run.Software {
 	return run.Software{Version: version, Settings: s.fingerprint()}
 }
+
+// cellSoftware is what a cell's document names.
+func (s *settings) cellSoftware() run.Software {
+	return run.Software{Version: version, Settings: s.cellFingerprint()}
+}

@@ -70,6 +70,7 @@ func follow(ctx context.Context, dir, state string, s *settings, console io.Writ
 		Analysis: s.Analysis, Limits: s.Limits, Software: s.software(),
 		Settle: seconds(s.Watch.SettleS), Sweep: seconds(s.Watch.SweepS),
 		Include: s.Watch.Include, Exclude: s.Watch.Exclude,
+		Cells: &watcher.Cells{Store: st, Settings: s.Cells, Software: s.cellSoftware(), Log: log},
 	})
 	if err != nil {
 		return err

@@ -295,6 +295,12 @@ func (t *Tables) frequencies(c *run.CellResult, ps []piece, s Settings) {
 		if !r.Decided {
 			f.Why = fmt.Sprintf("cannot tell %s from %s at these frequencies", r.Fits[0].Model.Name, r.Fits[1].Model.Name)
 		}
+		if n := len(r.LeftOut); n > 0 {
+			if f.Why != "" {
+				f.Why += "; "
+			}
+			f.Why += fmt.Sprintf("%d more model(s) need more frequencies", n)
+		}
 		for i, fit := range r.Fits {
 			m := run.ModelFit{Model: fit.Model.Name, AICc: fit.AICc, EvidenceRatio: fit.EvidenceRatio, ChiSquared: fit.ChiSquared, Freedom: fit.Freedom}
 			var boot []visco.Interval

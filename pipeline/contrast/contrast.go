@@ -52,7 +52,7 @@ func Summarise(cells []Cell) Summary {
 	s.Low, s.High, s.Cover = medianInterval(v)
 	z := ModifiedZ(v)
 	for i, c := range cells {
-		if math.Abs(z[i]) > outlying {
+		if len(v) >= fewestMarked && math.Abs(z[i]) > outlying {
 			s.Outliers = append(s.Outliers, c.Name)
 		}
 	}
@@ -112,6 +112,10 @@ func medianInterval(v []float64) (low, high, cover float64) {
 // outlying is the modified z-score beyond which a value is marked (Iglewicz and
 // Hoaglin, How to Detect and Handle Outliers, 1993; from memory).
 const outlying = 3.5
+
+// fewestMarked is the number of values below which none is marked: the median
+// deviation of a handful is too often small by chance.
+const fewestMarked = 6
 
 // ModifiedZ returns 0.6745 (x - median)/MAD of each value (Iglewicz and
 // Hoaglin), zeros where the MAD is 0.
@@ -245,14 +249,6 @@ func Compare(a, b []Cell, o Options) Comparison {
 		warn("All cells are of one session: how much sessions differ is not known, so the result holds for that session only.")
 	case shared == 0:
 		warn("No session holds both conditions: a difference between sessions cannot be told from one between conditions.")
-	}
-	for _, s := range []struct {
-		name string
-		x    Summary
-	}{{"A", c.A}, {"B", c.B}} {
-		if len(s.x.Outliers) > 0 {
-			warn("Condition %s has values far from the others, which are kept: %v.", s.name, s.x.Outliers)
-		}
 	}
 	if w := ConfoundedWithDrift(a, b); w != "" {
 		warn("%s", w)

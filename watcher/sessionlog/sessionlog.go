@@ -119,6 +119,8 @@ const (
 	EventStoreTrouble = "store-trouble"
 	EventStoreBack    = "store-back"
 	EventDefect       = "defect"
+	EventCell         = "cell"
+	EventCellTrouble  = "cell-trouble"
 )
 
 // Started says that the service has begun to watch.
@@ -181,6 +183,30 @@ func (l *Log) Verdict(r run.Result, revision int, supersedes string) {
 		attrs = append(attrs, slog.Any("segment", s))
 	}
 	l.say(level, EventVerdict, text, append(attrs, slog.Any("findings", r.Findings))...)
+}
+
+// Cell says what the runs of a cell tell together and what further run would
+// help. A cell with one oscillation is told to the file only: many labs take
+// one.
+func (l *Log) Cell(c run.CellResult, revision int) {
+	level := slog.LevelDebug
+	if len(c.FrequencyModels) > 0 {
+		level = slog.LevelInfo
+	}
+	for _, m := range c.Moduli {
+		if m.Heights > 1 {
+			level = slog.LevelInfo
+		}
+	}
+	l.say(level, EventCell, "cell "+plain.Text(c.Cell)+": "+plain.CellLine(c),
+		slog.String("cell", c.Cell), slog.String("session", c.Session), slog.Int("revision", revision),
+		slog.Int("runs", len(c.Runs)), slog.Bool("enough", c.Enough), slog.String("advice", c.Advice))
+}
+
+// CellTrouble says that the document of a cell cannot be made.
+func (l *Log) CellTrouble(session, cell string, err error) {
+	l.say(slog.LevelWarn, EventCellTrouble, "The runs of cell "+plain.Text(cell)+" cannot be taken together: "+err.Error(),
+		slog.String("cell", cell), slog.String("session", session), slog.String("error", err.Error()))
 }
 
 // FileTrouble says that a file cannot be read for now.
