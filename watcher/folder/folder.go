@@ -59,6 +59,8 @@ type Folder struct {
 	root string
 	o    Options
 
+	makeWatcher func() (*fsnotify.Watcher, error)
+
 	watcher *fsnotify.Watcher // nil where the system gives no events
 	watched map[string]bool   // folders with a watch
 	silent  bool              // NoEvents has been said
@@ -97,8 +99,12 @@ func New(root string, o Options) (*Folder, error) {
 	if !info.IsDir() {
 		return nil, &fs.PathError{Op: "watch", Path: root, Err: errors.New("is not a folder")}
 	}
-	return &Folder{root: root, o: o, rootIs: info, files: map[string]seen{}, lost: map[string]bool{}, watched: map[string]bool{}}, nil
+	return &Folder{root: root, o: o, makeWatcher: newWatcher, rootIs: info, files: map[string]seen{}, lost: map[string]bool{}, watched: map[string]bool{}}, nil
 }
+
+// newWatcher makes the system's file events. The buffer carries a burst while
+// the consumer is busy.
+func newWatcher() (*fsnotify.Watcher, error) { return fsnotify.NewBufferedWatcher(4096) }
 
 // Run follows the folder until ctx ends, and hands each batch over. The first
 // batch is a whole sweep.
@@ -161,7 +167,7 @@ func (f *Folder) Run(ctx context.Context, changed chan<- Batch) error {
 
 // listen starts the file events, as far as the system gives any.
 func (f *Folder) listen() {
-	w, err := fsnotify.NewBufferedWatcher(4096)
+	w, err := f.makeWatcher()
 	if err != nil {
 		f.noEvents(f.root, err)
 		return
