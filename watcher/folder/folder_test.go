@@ -37,10 +37,9 @@ type watch struct {
 	t     *testing.T
 	root  string
 	notes *notes
-	f     *Folder
 	mu    sync.Mutex
 	files map[string]File
-	told  int
+	swept int
 }
 
 func follow(t *testing.T, root string, sweep time.Duration, change func(*Folder)) *watch {
@@ -50,7 +49,6 @@ func follow(t *testing.T, root string, sweep time.Duration, change func(*Folder)
 	if err != nil {
 		t.Fatal(err)
 	}
-	w.f = f
 	if change != nil {
 		change(f)
 	}
@@ -63,7 +61,9 @@ func follow(t *testing.T, root string, sweep time.Duration, change func(*Folder)
 			w.mu.Lock()
 			for _, x := range b.Files {
 				w.files[x.Path] = x
-				w.told++
+			}
+			if b.Swept {
+				w.swept++
 			}
 			for _, p := range b.Gone {
 				delete(w.files, p)
@@ -104,7 +104,7 @@ const hour = time.Hour
 
 func TestEvents(t *testing.T) {
 	w := follow(t, t.TempDir(), hour, nil)
-	w.until("the first sweep", func() bool { return w.f.watcher != nil })
+	w.until("the first sweep", func() bool { return w.swept == 1 })
 	w.write("a.tsv", "1")
 	w.until("a new file", func() bool { return w.files["a.tsv"].Size == 1 })
 	w.write("a.tsv", "123")
@@ -165,26 +165,22 @@ func TestWhatIsTakenForARun(t *testing.T) {
 // More events than the queue holds: the overflow is said, and the sweep that
 // follows finds what was lost.
 func TestOverflow(t *testing.T) {
-	lost := make(chan error, 1)
-	w := follow(t, t.TempDir(), hour, func(f *Folder) {
-		f.makeWatcher = func() (*fsnotify.Watcher, error) {
-			x, err := fsnotify.NewWatcher()
-			if err == nil {
-				// Nothing is reported but the overflow.
-				x.Events = make(chan fsnotify.Event)
-				x.Errors = lost
-			}
-			return x, err
-		}
-	})
-	w.until("the start", func() bool { return w.f.sweeps == 1 })
-	for i := range 2000 {
-		w.write(fmt.Sprintf("run-%04d.tsv", i), "x")
+	root, n := t.TempDir(), &notes{}
+	f, err := New(root, Options{Include: []string{"*.tsv"}, Notice: n})
+	if err != nil {
+		t.Fatal(err)
 	}
-	lost <- fsnotify.ErrEventOverflow
-	w.until("all of them", func() bool { return len(w.files) == 2000 })
-	if n := w.notes.get(&w.notes.overflow); n != 1 {
-		t.Errorf("said %d times", n)
+	f.sweep()
+	for i := range 2000 {
+		if err := os.WriteFile(filepath.Join(root, fmt.Sprintf("run-%04d.tsv", i)), nil, 0o644); err != nil {
+			t.Fatal(err)
+		}
+	}
+	if b := f.failed(fsnotify.ErrEventOverflow); len(b.Files) != 2000 || !b.Swept {
+		t.Errorf("%d of 2000 files found", len(b.Files))
+	}
+	if n.overflow != 1 {
+		t.Errorf("said %d times", n.overflow)
 	}
 }
 
