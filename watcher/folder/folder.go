@@ -255,6 +255,11 @@ func (f *Folder) look(touched map[string]bool) Batch {
 		info, err := os.Lstat(name)
 		if err != nil {
 			delete(f.watched, name)
+			// With its folder gone nothing is known of the file: the sweep
+			// tells a folder that was removed from one that is away.
+			if _, err := os.Lstat(filepath.Dir(name)); err != nil {
+				continue
+			}
 			if _, ok := f.files[filepath.ToSlash(rel)]; ok && errors.Is(err, fs.ErrNotExist) {
 				delete(f.files, filepath.ToSlash(rel))
 				b.Gone = append(b.Gone, filepath.ToSlash(rel))
