@@ -271,6 +271,7 @@ func dropLost(s *run.Segment, lost []run.Interval) {
 		s.TensionNPerM, s.TensionSlope, s.TensionScatter, s.Relaxation = nil, nil, nil, nil
 		s.AreaStrainAmplitude, s.Distortion, s.PhaseDeg = nil, nil, nil
 		s.StorageNPerM, s.LossNPerM, s.StorageScatter, s.LossScatter = nil, nil, nil, nil
+		s.Why = "contact was lost"
 	}
 }
 

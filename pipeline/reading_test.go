@@ -18,15 +18,11 @@ import (
 // text is a short simulated run as exported.
 func text(t testing.TB, s phantom.Spec) []byte {
 	t.Helper()
-	rec, err := phantom.Simulate(s)
+	b, err := phantom.Text(s)
 	if err != nil {
 		t.Fatal(err)
 	}
-	var b bytes.Buffer
-	if _, err := rec.WriteTo(&b); err != nil {
-		t.Fatal(err)
-	}
-	return b.Bytes()
+	return b
 }
 
 // at sets the sampling rate of a simulated run.

@@ -91,6 +91,7 @@ func (f *frame) segment(t *track, budget int) run.Segment {
 	seg := run.Segment{Mode: t.mode, FromS: t.fromS, ToS: t.toS}
 	pts := t.reduced(max(budget, 16*t.legs/2))
 	if len(pts) < 4 {
+		seg.Why = "too few samples"
 		return seg
 	}
 	switch t.mode {
@@ -122,6 +123,7 @@ func (f *frame) hold(seg *run.Segment, pts []point) {
 	p := pointsOf(pts, f.step)
 	mean, u, slope, uSlope, _, err := harmonic.MeanSlope(p, cols[colHeight])
 	if err != nil {
+		seg.Why = err.Error()
 		return
 	}
 	seg.HeightM = run.Known(mean, math.Hypot(u, f.uOffset))
@@ -131,10 +133,14 @@ func (f *frame) hold(seg *run.Segment, pts []point) {
 		seg.ForceN = run.Known(m, math.Sqrt(u*u+math.Pow(f.zero.uAt(middle), 2)+math.Pow(m*f.uScale, 2)))
 	}
 	if !pressed {
+		if f.radius == 0 {
+			seg.Why = f.notPressed()
+		}
 		return
 	}
 	m, u, s, us, _, err := harmonic.MeanSlope(p, cols[colTension])
 	if err != nil {
+		seg.Why = err.Error()
 		return
 	}
 	seg.TensionScatter = run.Number(u)
@@ -143,11 +149,22 @@ func (f *frame) hold(seg *run.Segment, pts []point) {
 		return []float64{weightedMean(pts, c[colTension])}, ok
 	})
 	if b == nil {
+		seg.Why = whyNoCommon
 		return
 	}
 	seg.TensionNPerM = run.Known(m, math.Sqrt(u*u+b[0]*b[0]+math.Pow(m*f.uScale, 2)))
 	seg.TensionSlope = run.Known(s, math.Hypot(us, math.Abs(s)*f.uScale))
 }
+
+// notPressed says why a segment has no tension.
+func (f *frame) notPressed() string {
+	if f.radius == 0 {
+		return "the size of the cell is not known"
+	}
+	return "the plate is off the cell, or hardly touches it"
+}
+
+const whyNoCommon = "within the uncertainty of the cell's size the plate may be off the cell"
 
 func weightedMean(pts []point, x []float64) float64 {
 	var s, w float64
@@ -191,18 +208,21 @@ func (f *frame) oscillation(seg *run.Segment, t *track, pts []point) {
 	model := harmonic.Model{Trend: 2, Harmonics: 3}
 	pts = sinusoidal(pts, seg.FromS, seg.ToS, t.drive)
 	if len(pts) < 4 {
+		seg.Why = "too few samples"
 		return
 	}
 	cols, pressed := f.series(pts)
 	p := pointsOf(pts, f.step)
 	freq, uFreq, err := harmonic.RefineFrequency(p, cols[colHeight], t.drive, model)
 	if err != nil {
+		seg.Why = err.Error()
 		return
 	}
 	seg.FrequencyHz = run.Known(freq, uFreq)
 	seg.Cycles = (seg.ToS - seg.FromS) * freq
 	fit, err := harmonic.FitSine(p, freq, cols[:], model)
 	if err != nil {
+		seg.Why = err.Error()
 		return
 	}
 	middle := (seg.FromS + seg.ToS) / 2
@@ -214,6 +234,7 @@ func (f *frame) oscillation(seg *run.Segment, t *track, pts []point) {
 	seg.ForceAmplitudeN = amplitude(fit, colForce, f.uScale)
 	seg.SNRdB = run.Number(fit.SNRdB(colForce))
 	if !pressed {
+		seg.Why = f.notPressed()
 		return
 	}
 	seg.AreaStrainAmplitude = amplitude(fit, colStrain, 0)
@@ -226,6 +247,7 @@ func (f *frame) oscillation(seg *run.Segment, t *track, pts []point) {
 	}
 	modulus, err := harmonic.Modulus(fit, colTension, colStrain)
 	if err != nil {
+		seg.Why = err.Error()
 		return
 	}
 	k := modulus.K
@@ -250,6 +272,7 @@ func (f *frame) oscillation(seg *run.Segment, t *track, pts []point) {
 		return []float64{fit.Channel(0).Mean, real(k), imag(k), phase(k), math.Hypot(real(e1), imag(e1))}, true
 	})
 	if b == nil {
+		seg.Why = whyNoCommon
 		return
 	}
 	seg.TensionScatter = run.Number(uTension)

@@ -1,7 +1,6 @@
 package pipeline_test
 
 import (
-	"bytes"
 	"encoding/json"
 	"fmt"
 	"math"
@@ -24,12 +23,8 @@ func analysed(t testing.TB, s phantom.Spec, set pipeline.Settings) (run.Estimate
 	if err != nil {
 		t.Fatal(err)
 	}
-	var b bytes.Buffer
-	if _, err := rec.WriteTo(&b); err != nil {
-		t.Fatal(err)
-	}
 	r := pipeline.Open(s.Name, set)
-	r.Feed(b.Bytes())
+	r.Feed(text(t, s))
 	how := r.Completion()
 	if how == run.Growing {
 		how = run.BySettling
@@ -224,17 +219,10 @@ func TestChunksDoNotMatter(t *testing.T) {
 	specs := phantom.Session(3)
 	for _, s := range []phantom.Spec{specs[0], specs[5], specs[7], specs[10], specs[11]} {
 		s.Rig.RateHz, s.Rig.FlickerToHz = 100, 50
-		rec, err := phantom.Simulate(s)
-		if err != nil {
-			t.Fatal(err)
-		}
-		var b bytes.Buffer
-		if _, err := rec.WriteTo(&b); err != nil {
-			t.Fatal(err)
-		}
+		whole := text(t, s)
 		document := func(cut func() int, look bool) string {
 			r := pipeline.Open(s.Name, pipeline.Defaults())
-			for p := b.Bytes(); len(p) > 0; {
+			for p := whole; len(p) > 0; {
 				n := min(len(p), cut())
 				r.Feed(p[:n])
 				p = p[n:]
@@ -249,15 +237,15 @@ func TestChunksDoNotMatter(t *testing.T) {
 			}
 			return string(text)
 		}
-		whole := document(func() int { return b.Len() }, false)
+		want := document(func() int { return len(whole) }, false)
 		rng := rand.New(rand.NewPCG(5, 5))
 		for name, got := range map[string]string{
 			"single bytes":              document(func() int { return 1 }, false),
 			"random pieces, looked at":  document(func() int { return 1 + rng.IntN(40000) }, true),
 			"small pieces, not a block": document(func() int { return 777 }, false),
 		} {
-			if got != whole {
-				t.Errorf("%s: %s gives another document\n%s\n%s", s.Name, name, whole, got)
+			if got != want {
+				t.Errorf("%s: %s gives another document\n%s\n%s", s.Name, name, want, got)
 			}
 		}
 	}

@@ -201,15 +201,11 @@ func export(t testing.TB, i int, ending phantom.Ending) []byte {
 	s := phantom.Session(5)[i]
 	s.Rig.RateHz, s.Rig.FlickerToHz = 50, 25
 	s.Dialect.Ending = ending
-	rec, err := phantom.Simulate(s)
+	b, err := phantom.Text(s)
 	if err != nil {
 		t.Fatal(err)
 	}
-	var b bytes.Buffer
-	if _, err := rec.WriteTo(&b); err != nil {
-		t.Fatal(err)
-	}
-	return b.Bytes()
+	return b
 }
 
 // undisturbed is the document that the analysis gives of finished bytes.

@@ -64,16 +64,21 @@ func (c checkCommand) Run(s *settings, to streams) error {
 
 // checkFile takes a finished file down the same road as a growing one.
 func checkFile(file string, s *settings) (run.Result, error) {
+	const give = "give the path of a run file that exists and that you may read"
+	// Looked at before it is opened: opening a pipe would wait for a writer.
+	switch info, err := os.Stat(file); {
+	case err != nil:
+		return run.Result{}, fmt.Errorf("%w: %s", err, give)
+	case info.IsDir():
+		return run.Result{}, fmt.Errorf("%s is a folder: give the run files in it, or follow it with platen watch", file)
+	case !info.Mode().IsRegular():
+		return run.Result{}, fmt.Errorf("%s is not a regular file: %s", file, give)
+	}
 	f, err := os.Open(file)
 	if err != nil {
-		return run.Result{}, fmt.Errorf("%w: give the path of a run file that exists and that you may read", err)
+		return run.Result{}, fmt.Errorf("%w: %s", err, give)
 	}
 	defer f.Close()
-	if info, err := f.Stat(); err != nil {
-		return run.Result{}, err
-	} else if info.IsDir() {
-		return run.Result{}, fmt.Errorf("%s is a folder: give the run files in it, or follow it with platen watch", file)
-	}
 	name := filepath.ToSlash(file)
 	r := pipeline.Open(name, s.Analysis)
 	block := make([]byte, 256<<10)

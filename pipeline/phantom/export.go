@@ -91,6 +91,18 @@ func (r *Recording) WriteTo(w io.Writer) (n int64, err error) {
 	return n, nil
 }
 
+// Text simulates a run and returns the whole file in the dialect of its Spec,
+// for runs short enough to be held.
+func Text(s Spec) ([]byte, error) {
+	rec, err := Simulate(s)
+	if err != nil {
+		return nil, err
+	}
+	var b bytes.Buffer
+	_, err = rec.WriteTo(&b)
+	return b.Bytes(), err
+}
+
 // Export yields the file in pieces, each with the moment of the run in s at
 // which the instrument has it: the header first, at 0, then rows, then the end
 // mark if there is one. A piece is valid until the next is asked for, and holds

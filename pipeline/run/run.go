@@ -138,6 +138,9 @@ type Segment struct {
 	SNRdB               *float64  `json:"snr_db,omitempty"`     // of the force: 20 log10(rms of the fundamental / rms residual)
 	Distortion          *float64  `json:"distortion,omitempty"` // of the tension: rms of harmonics 2 and 3 over the fundamental
 
+	// Why says why an oscillation has no modulus, or a hold no tension.
+	Why string `json:"why,omitempty"`
+
 	// The part of the uncertainty that scatters from cycle to cycle (type A,
 	// JCGM 100); what remains is common to all segments of the rig.
 	TensionScatter *float64 `json:"tension_u_scatter_n_per_m,omitempty"`

@@ -202,6 +202,13 @@ func sourceName(s run.VolumeSource) string {
 	return string(s)
 }
 
+func lacking(s run.Segment) string {
+	if s.Mode == run.Oscillation {
+		return "modulus"
+	}
+	return "tension"
+}
+
 type printer struct {
 	w   io.Writer
 	err error
@@ -214,6 +221,9 @@ func (p *printer) printf(format string, args ...any) {
 }
 
 func (p *printer) segment(s run.Segment) {
+	if s.Why != "" {
+		defer func() { p.printf("              no %s: %s\n", lacking(s), Text(s.Why)) }()
+	}
 	p.printf("  %-11s %7.2f – %7.2f s", s.Mode, s.FromS, s.ToS)
 	if s.HeightM != nil {
 		p.printf("  height %s", Quantity(s.HeightM, Micrometre, "µm"))
