@@ -28,6 +28,12 @@ func (s *sampler) estimate(e *run.Estimates, set Settings) {
 	if q, ok := sensitivity(set, e.Header); ok && s.channels.metrePerV != 0 {
 		e.Sensitivity = &q
 	}
+	if e.Header.Kind == run.KindThermal {
+		if e.Completion != run.Growing {
+			e.Reference = s.thermal(e, set)
+		}
+		return
+	}
 	if s.segments == nil {
 		return
 	}

@@ -5,6 +5,7 @@ import (
 	"slices"
 	"sync"
 
+	"platen/pipeline/calib"
 	"platen/pipeline/run"
 	"platen/pipeline/squeeze"
 )
@@ -30,6 +31,7 @@ type sampler struct {
 	segments *segmenter
 	label    int32
 
+	spectrum   calib.Spectrum // of a thermal run's deflection
 	clip       clipWatch
 	images     images
 	fromS, toS float64
@@ -45,6 +47,7 @@ type sampler struct {
 type row struct {
 	stamp, quantum      float64
 	force, height       float64
+	deflection          float64 // m
 	radius, temperature float64
 	label               int32
 }
@@ -97,13 +100,17 @@ func sensitivity(s Settings, h run.Header) (run.Quantity, bool) {
 func (s *sampler) resolve(b *run.Block) error {
 	s.channels.resolved = true
 	needsDeflectionM := b.Height == nil && b.Drive != nil
-	if b.DeflectionV != nil && b.DeflectionM == nil && (b.Force == nil || needsDeflectionM) {
+	thermal := s.header.Kind == run.KindThermal
+	if b.DeflectionV != nil && b.DeflectionM == nil && (b.Force == nil || needsDeflectionM || thermal) {
 		q, ok := sensitivity(s.settings, s.header)
 		if !ok {
 			return &missingError{"a deflection sensitivity", "deflection in volts without one",
 				`add a header line such as "# sensitivity [nm/V]: 85 ± 2", or sensitivity_nm_per_v under [analysis] in platen.toml`}
 		}
 		s.channels.metrePerV = q.Value
+	}
+	if thermal {
+		return nil // it is there to measure the spring constant
 	}
 	if b.Force == nil || (needsDeflectionM && b.DeflectionM == nil && b.DeflectionV == nil) {
 		k, source := springConstant(s.settings, s.header)
@@ -161,6 +168,7 @@ func (s *sampler) row(b *run.Block, i int) row {
 	case b.DeflectionV != nil && s.channels.metrePerV != 0:
 		deflection = b.DeflectionV[i] * s.channels.metrePerV
 	}
+	r.deflection = deflection
 	if b.Force != nil {
 		r.force = b.Force[i]
 	} else {
@@ -225,6 +233,12 @@ func (s *sampler) sample(r row) {
 	if r.label != s.label {
 		s.segments.cut(t)
 		s.label = r.label
+	}
+	if s.header.Kind == run.KindThermal {
+		if !math.IsNaN(r.deflection) {
+			s.spectrum.Add(r.deflection)
+		}
+		return
 	}
 	s.clip.add(t, r.force)
 	if math.IsNaN(r.height) || math.IsNaN(r.force) {

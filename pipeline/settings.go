@@ -4,6 +4,8 @@ import (
 	"fmt"
 	"math"
 	"time"
+
+	"platen/pipeline/calib"
 )
 
 // Settings are the choices of the analysis. The zero value is not usable:
@@ -53,10 +55,24 @@ type Settings struct {
 	// contact from inventing a steep drift. Default 5 pN/s.
 	DriftPriorPNPerS float64 `toml:"drift_prior_pn_per_s"`
 
+	// ThermalFactor is the share of kT/k that the first mode shows in a thermal
+	// run: 0.817 (default) for a sensor that reads the slope of the beam's end
+	// and was calibrated by pressing on a hard surface, 0.971 for one that
+	// reads deflection.
+	ThermalFactor float64 `toml:"thermal_factor"`
+
+	// TemperatureC and its uncertainty, where a thermal run names none.
+	// Defaults 25 and 2 degrees Celsius.
+	TemperatureC  float64 `toml:"temperature_c"`
+	TemperatureUC float64 `toml:"temperature_u_c"`
+
 	// TimeZone is the zone (IANA name, such as "Europe/Lisbon") of start times
 	// that an exporter writes without one. Default "": that of this computer.
 	TimeZone string `toml:"time_zone"`
 }
+
+// absoluteZeroC turns degrees Celsius into kelvin.
+const absoluteZeroC = 273.15
 
 // zone returns the time zone of start times written without one.
 func (s Settings) zone() *time.Location {
@@ -79,6 +95,9 @@ func Defaults() Settings {
 		ContactRadiusUPercent: 1,
 		ZeroForceUPN:          50,
 		DriftPriorPNPerS:      5,
+		ThermalFactor:         math.Round(1e4*calib.FactorSlope) / 1e4,
+		TemperatureC:          25,
+		TemperatureUC:         2,
 	}
 }
 
@@ -101,6 +120,9 @@ func (s Settings) Validate() error {
 		{"contact_radius_u_percent", s.ContactRadiusUPercent, 0, true},
 		{"zero_force_u_pn", s.ZeroForceUPN, 0, true},
 		{"drift_prior_pn_per_s", s.DriftPriorPNPerS, 0, false},
+		{"thermal_factor", s.ThermalFactor, 0, false},
+		{"temperature_c", s.TemperatureC + absoluteZeroC, 0, false},
+		{"temperature_u_c", s.TemperatureUC, 0, true},
 	} {
 		if math.IsNaN(c.v) || math.IsInf(c.v, 0) || c.v < c.min || (c.v == c.min && !c.allowEqual) {
 			want := "0 or more"

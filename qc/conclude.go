@@ -31,6 +31,7 @@ func Conclude(e run.Estimates, id, file string, l Limits, sw run.Software) run.R
 		Verdict:     Verdict(findings),
 		Findings:    findings,
 		Cell:        cellState(e),
+		Reference:   e.Reference,
 		Segments:    segments(e.Segments),
 		Calibration: calibration(e),
 		Software:    sw,

@@ -49,6 +49,8 @@ type Limits struct {
 	AdhesionLeast  float64 `toml:"adhesion_least_pn"`
 
 	TruncatedRepeat float64 `toml:"truncated_repeat_percent"`
+
+	ThermalMisfit float64 `toml:"thermal_misfit_review"` // 1 for a perfect fit
 }
 
 // Defaults returns the limits in force where the user gives none.
@@ -82,6 +84,7 @@ func Defaults() Limits {
 		AdhesionRepeat:     20,
 		AdhesionLeast:      100,
 		TruncatedRepeat:    20,
+		ThermalMisfit:      2,
 	}
 }
 
@@ -109,6 +112,7 @@ func (l Limits) Validate() error {
 		{"adhesion", l.AdhesionReview, l.AdhesionRepeat},
 		{"adhesion_least", l.AdhesionLeast, l.AdhesionLeast},
 		{"truncated", l.TruncatedRepeat, l.TruncatedRepeat},
+		{"thermal_misfit", l.ThermalMisfit, l.ThermalMisfit},
 	} {
 		for _, v := range []float64{p.review, p.repeat} {
 			if math.IsNaN(v) || math.IsInf(v, 0) || v < 0 {

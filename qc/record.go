@@ -63,6 +63,28 @@ func judgeTimeOrder(c *court) {
 		"Export the run again; if it stays so, look for a clock that is set while recording.")
 }
 
+// judgeThermal: whether a thermal run gives a spring constant, and how well the
+// fitted spectrum describes the measured one.
+func judgeThermal(c *court) {
+	r := c.e.Reference
+	if c.e.Header.Kind != run.KindThermal || !c.over || c.e.Trouble != nil {
+		return
+	}
+	switch {
+	case r == nil || r.SpringConstantNPerM == nil:
+		why := "there is no deflection in it"
+		if r != nil && r.Why != "" {
+			why = r.Why
+		}
+		c.find(run.ToRepeat, c.whole(), value{}, fmt.Sprintf("No spring constant from this thermal run: %s.", why),
+			"Record at least ten seconds of the free sensor's deflection, far from any surface.")
+	case r.Misfit != nil && *r.Misfit > c.l.ThermalMisfit:
+		c.find(run.ToReview, c.whole(), value{*r.Misfit, 0, c.l.ThermalMisfit, "1"},
+			fmt.Sprintf("The spectrum is not that of one free resonance: it scatters %.2g times as much about the fit as noise allows (limit %.2g).", *r.Misfit, c.l.ThermalMisfit),
+			"Look for hum, a second resonance, or a surface nearby, and record again.")
+	}
+}
+
 // judgeTruncated: share of the declared samples that are missing, once the run
 // is over.
 func judgeTruncated(c *court) {

@@ -50,6 +50,12 @@ var table = []ruling{
 		Advice: "see whether the export was stopped",
 	}, judgeTruncated},
 	{Rule{
+		Name: "thermal-fit", What: "whether a thermal run gives a spring constant; scatter about the fitted spectrum over what noise allows", Unit: "1",
+		Limits: "repeat without one, review above 2",
+		Reason: "a peak outside the band, aliased, or not that of one free beam gives a wrong spring constant, and with it wrong tensions",
+		Advice: "record the free sensor again, longer or faster sampled",
+	}, judgeThermal},
+	{Rule{
 		Name: "time-order", What: "time stamps that step back beyond their rounding", Unit: "steps",
 		Limits:   "review any, repeat above 3",
 		Reason:   "rows out of order, or written twice, cannot be told from a real movement",

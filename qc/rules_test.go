@@ -137,6 +137,13 @@ func TestRules(t *testing.T) {
 		{"cut in half", func(e *run.Estimates) { e.Samples = 20000 }, "truncated", run.ToRepeat},
 		{"empty tail", func(e *run.Estimates) { e.NULTail = 4096 }, "truncated", run.ToReview},
 
+		{"thermal without a peak", func(e *run.Estimates) {
+			*e = run.Estimates{Header: run.Header{Kind: run.KindThermal}, Completion: run.ByCount, Samples: 9, Reference: &run.Reference{Why: "it drowns"}}
+		}, "thermal-fit", run.ToRepeat},
+		{"thermal, badly fitted", func(e *run.Estimates) {
+			*e = run.Estimates{Header: run.Header{Kind: run.KindThermal}, Completion: run.ByCount, Samples: 9, Reference: &run.Reference{SpringConstantNPerM: q(0.2, 0.01), Misfit: n(3)}}
+		}, "thermal-fit", run.ToReview},
+
 		{"a broken run", func(e *run.Estimates) {
 			e.Trouble = &run.Trouble{Line: 7, Byte: 99, Want: "a number", Got: "x", Fix: "export numbers", IsRun: true}
 		}, "unreadable", run.ToRepeat},
@@ -204,7 +211,8 @@ func TestProvisional(t *testing.T) {
 // A run without a cell is not judged as one.
 func TestKinds(t *testing.T) {
 	for _, kind := range []run.Kind{run.KindBlank, run.KindGlass, run.KindThermal} {
-		e := run.Estimates{Header: run.Header{Kind: kind}, Completion: run.ByEndMark, Samples: 10, Segments: []run.Segment{oscillating()}}
+		e := run.Estimates{Header: run.Header{Kind: kind}, Completion: run.ByEndMark, Samples: 10,
+			Reference: &run.Reference{SpringConstantNPerM: q(0.2, 0.01), Misfit: n(1)}, Segments: []run.Segment{oscillating()}}
 		e.Segments[0].Distortion, e.Segments[0].PhaseDeg, e.Segments[0].Cycles = n(0.9), q(-40, 1), 1
 		e.Losses = []run.Interval{{FromS: 1, ToS: 9}}
 		if fs := Judge(e, Defaults()); len(fs) != 0 {
@@ -259,7 +267,7 @@ func TestRulesTellTheDefaults(t *testing.T) {
 		"strain-range": {d.StrainLeast, d.StrainReview, d.StrainRepeat}, "distortion": {d.DistortReview, d.DistortRepeat},
 		"phase-range": {0, 90}, "few-cycles": {d.FewestCycles}, "contact-loss": {d.ContactLoss}, "clipping": {d.ClippedRepeat},
 		"sample-gap": {d.GapReview, d.GapRepeat}, "time-order": {d.StepsBackRepeat},
-		"adhesion": {d.AdhesionReview, d.AdhesionRepeat, d.AdhesionLeast}, "truncated": {d.TruncatedRepeat},
+		"adhesion": {d.AdhesionReview, d.AdhesionRepeat, d.AdhesionLeast}, "truncated": {d.TruncatedRepeat}, "thermal-fit": {d.ThermalMisfit},
 		"no-contact": nil, "unreadable": nil,
 	}
 	for _, r := range Rules() {

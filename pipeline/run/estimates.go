@@ -27,6 +27,8 @@ type Estimates struct {
 	Sensitivity       *Quantity
 	CalibrationSource string
 
+	Reference *Reference // of a thermal run
+
 	Sampling Sampling
 	Clips    []Clip
 

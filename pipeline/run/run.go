@@ -203,6 +203,7 @@ type Result struct {
 	Verdict     Verdict     `json:"verdict"`
 	Findings    []Finding   `json:"findings"`
 	Cell        *CellState  `json:"cell,omitempty"`
+	Reference   *Reference  `json:"reference,omitempty"` // what a thermal run measured
 	Segments    []Segment   `json:"segments"`
 	Calibration Calibration `json:"calibration"`
 	Software    Software    `json:"software"`
@@ -241,6 +242,18 @@ type Calibration struct {
 	BaselineSlopeNPerS  *Quantity `json:"baseline_slope_n_per_s,omitempty"`
 	Source              string    `json:"source"`      // "header", "settings" or "none"
 	Corrections         []string  `json:"corrections"` // names of the corrections applied: "baseline", "drag", "lag"
+}
+
+// Reference is what a reference run measured of the instrument.
+type Reference struct {
+	SpringConstantNPerM *Quantity `json:"spring_constant_n_per_m,omitempty"`
+	ResonanceHz         *Quantity `json:"resonance_hz,omitempty"`
+	QualityFactor       *Quantity `json:"quality_factor,omitempty"`
+	MeanSquareM2        *Quantity `json:"mean_square_m2,omitempty"` // of the first mode
+	TemperatureK        *Quantity `json:"temperature_k,omitempty"`
+	Factor              float64   `json:"equipartition_factor"`
+	Misfit              *float64  `json:"misfit,omitempty"` // scatter about the fitted spectrum over what the averages allow; near 1
+	Why                 string    `json:"why,omitempty"`    // why there is no spring constant
 }
 
 // Software names the program and the settings that made a result.

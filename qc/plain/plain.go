@@ -115,6 +115,9 @@ func Line(r run.Result) string {
 		b.WriteString(numbers(s))
 	} else if r.Run.Kind != run.KindCell {
 		fmt.Fprintf(&b, ": %s run", r.Run.Kind)
+		if x := r.Reference; x != nil && x.SpringConstantNPerM != nil {
+			fmt.Fprintf(&b, ", %s", reference(*x))
+		}
 	}
 	if r.Verdict != run.Accept && len(r.Findings) > 0 {
 		f := r.Findings[0]
@@ -132,6 +135,12 @@ func numbers(s *run.Segment) string {
 			"at "+frequency(s.FrequencyHz))
 	}
 	return strings.Join(parts, ", ")
+}
+
+// reference says what a thermal run measured.
+func reference(x run.Reference) string {
+	return fmt.Sprintf("spring constant %s, resonance %s, quality factor %s",
+		Quantity(x.SpringConstantNPerM, 1, "N/m"), Quantity(x.ResonanceHz, 1e-3, "kHz"), Quantity(x.QualityFactor, 1, ""))
 }
 
 // frequency is known far better than anybody wants to read.
@@ -179,6 +188,9 @@ func Summary(w io.Writer, r run.Result) error {
 		}
 		p.printf("  cell volume %s, diameter %s (from %s)\n",
 			Quantity(c.VolumeM3, Picolitre, "pL"), Quantity(diameter, Micrometre, "µm"), sourceName(c.VolumeSource))
+	}
+	if x := r.Reference; x != nil && x.SpringConstantNPerM != nil {
+		p.printf("  %s (share of kT/k %.4g, %s)\n", reference(*x), x.Factor, Quantity(x.TemperatureK, 1, "K"))
 	}
 	for _, s := range r.Segments {
 		p.segment(s)
