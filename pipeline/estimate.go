@@ -73,6 +73,9 @@ func (s *sampler) estimate(e *run.Estimates, set Settings) {
 		}
 	}
 	e.Clips = s.clip.clips(zero.offset, zero.noise)
+	if e.Header.Kind == run.KindBlank && final {
+		e.Reference = blank(tracks, zero, s.time.interval())
+	}
 
 	f := s.frame(e, zero, set)
 	budget := maxPoints

@@ -176,6 +176,20 @@ func TestOtherKinds(t *testing.T) {
 		if r.Verdict != run.Accept || r.Cell != nil {
 			t.Errorf("%s run: %s, %+v, %v", kind, r.Verdict, r.Cell, r.Findings)
 		}
+		// The rig's white noise of 30 pN, with a little 1/f noise, is found; the
+		// Allan deviation at one sample is that of white noise.
+		if kind == run.KindBlank {
+			ref := r.Reference
+			if ref == nil || ref.ForceNoiseN == nil || math.Abs(*ref.ForceNoiseN/30e-12-1) > 0.05 {
+				t.Fatalf("blank: %+v", ref)
+			}
+			if a := ref.Allan[0]; math.Abs(a.TimeS-1./200) > 1e-6 || math.Abs(a.DeviationN/30e-12-1) > 0.1 {
+				t.Errorf("Allan deviation %+v", a)
+			}
+			if ref.SteadiestS == nil || *ref.SteadiestS < 0.1 {
+				t.Errorf("steadiest %+v", ref.SteadiestS)
+			}
+		}
 	}
 	s.Header.Kind = run.KindCell
 	r := read(t, "no cell", text(t, s))

@@ -27,7 +27,7 @@ type Estimates struct {
 	Sensitivity       *Quantity
 	CalibrationSource string
 
-	Reference *Reference // of a thermal run
+	Reference *Reference // of a thermal or blank run
 
 	Sampling Sampling
 	Clips    []Clip

@@ -203,7 +203,7 @@ type Result struct {
 	Verdict     Verdict     `json:"verdict"`
 	Findings    []Finding   `json:"findings"`
 	Cell        *CellState  `json:"cell,omitempty"`
-	Reference   *Reference  `json:"reference,omitempty"` // what a thermal run measured
+	Reference   *Reference  `json:"reference,omitempty"` // what a thermal or blank run measured
 	Segments    []Segment   `json:"segments"`
 	Calibration Calibration `json:"calibration"`
 	Software    Software    `json:"software"`
@@ -251,9 +251,20 @@ type Reference struct {
 	QualityFactor       *Quantity `json:"quality_factor,omitempty"`
 	MeanSquareM2        *Quantity `json:"mean_square_m2,omitempty"` // of the first mode
 	TemperatureK        *Quantity `json:"temperature_k,omitempty"`
-	Factor              float64   `json:"equipartition_factor"`
+	Factor              float64   `json:"equipartition_factor,omitempty"`
 	Misfit              *float64  `json:"misfit,omitempty"` // scatter about the fitted spectrum over what the averages allow; near 1
 	Why                 string    `json:"why,omitempty"`    // why there is no spring constant
+
+	// Of a blank run: the force while the plate stands.
+	ForceNoiseN *float64     `json:"force_noise_n,omitempty"` // rms of single samples about a straight line
+	Allan       []AllanPoint `json:"allan,omitempty"`         // overlapping Allan deviation
+	SteadiestS  *float64     `json:"steadiest_s,omitempty"`   // averaging time of the smallest one: averaging for longer gains nothing
+}
+
+// AllanPoint is the Allan deviation of the force at one averaging time.
+type AllanPoint struct {
+	TimeS      float64 `json:"time_s"`
+	DeviationN float64 `json:"deviation_n"`
 }
 
 // Software names the program and the settings that made a result.

@@ -115,8 +115,8 @@ func Line(r run.Result) string {
 		b.WriteString(numbers(s))
 	} else if r.Run.Kind != run.KindCell {
 		fmt.Fprintf(&b, ": %s run", r.Run.Kind)
-		if x := r.Reference; x != nil && x.SpringConstantNPerM != nil {
-			fmt.Fprintf(&b, ", %s", reference(*x))
+		if x := r.Reference; x != nil {
+			b.WriteString(reference(*x))
 		}
 	}
 	if r.Verdict != run.Accept && len(r.Findings) > 0 {
@@ -137,10 +137,24 @@ func numbers(s *run.Segment) string {
 	return strings.Join(parts, ", ")
 }
 
-// reference says what a thermal run measured.
+// reference says what a reference run measured, "" where nothing.
 func reference(x run.Reference) string {
-	return fmt.Sprintf("spring constant %s, resonance %s, quality factor %s",
-		Quantity(x.SpringConstantNPerM, 1, "N/m"), Quantity(x.ResonanceHz, 1e-3, "kHz"), Quantity(x.QualityFactor, 1, ""))
+	s := ""
+	if x.SpringConstantNPerM != nil {
+		s = fmt.Sprintf(", spring constant %s, resonance %s, quality factor %s",
+			Quantity(x.SpringConstantNPerM, 1, "N/m"), Quantity(x.ResonanceHz, 1e-3, "kHz"), Quantity(x.QualityFactor, 1, ""))
+	}
+	if x.ForceNoiseN != nil {
+		s += fmt.Sprintf(", force noise %.3g pN a sample", 1e12**x.ForceNoiseN)
+	}
+	if x.SteadiestS != nil {
+		for _, a := range x.Allan {
+			if a.TimeS == *x.SteadiestS {
+				s += fmt.Sprintf(", steadiest averaged over %.2g s (%.2g pN)", a.TimeS, 1e12*a.DeviationN)
+			}
+		}
+	}
+	return s
 }
 
 // frequency is known far better than anybody wants to read.
@@ -189,8 +203,8 @@ func Summary(w io.Writer, r run.Result) error {
 		p.printf("  cell volume %s, diameter %s (from %s)\n",
 			Quantity(c.VolumeM3, Picolitre, "pL"), Quantity(diameter, Micrometre, "µm"), sourceName(c.VolumeSource))
 	}
-	if x := r.Reference; x != nil && x.SpringConstantNPerM != nil {
-		p.printf("  %s (share of kT/k %.4g, %s)\n", reference(*x), x.Factor, Quantity(x.TemperatureK, 1, "K"))
+	if x := r.Reference; x != nil && reference(*x) != "" {
+		p.printf("  %s\n", strings.TrimPrefix(reference(*x), ", "))
 	}
 	for _, s := range r.Segments {
 		p.segment(s)
