@@ -8,7 +8,8 @@ import (
 )
 
 // judgeVolumeChange: relative change of the imaged volume, of a line through
-// all images and of each segment against the first images; the largest counts.
+// all images and of each segment against the first images; the one furthest out
+// of its noise counts. Review or repeat; cells only.
 func judgeVolumeChange(c *court) {
 	if !c.cell() {
 		return
@@ -43,7 +44,8 @@ func judgeVolumeChange(c *court) {
 }
 
 // judgeVolumeDisagreement: relative difference of the volumes that two sources
-// give, beyond twice the joint uncertainty and the limit.
+// give, V2/V1 - 1 = (r2/r1)^3 - 1, beyond the limit by more than twice the joint
+// uncertainty. Review; cells only.
 func judgeVolumeDisagreement(c *court) {
 	if !c.cell() {
 		return
@@ -56,7 +58,7 @@ func judgeVolumeDisagreement(c *court) {
 				continue
 			}
 			diff := math.Pow(b.Value/a.Value, 3) - 1
-			u := 3 * math.Hypot(a.U/a.Value, b.U/b.Value)
+			u := 3 * (1 + diff) * math.Hypot(a.U/a.Value, b.U/b.Value)
 			if !beyond(diff, u, c.l.VolumeDisagreement/100) {
 				continue
 			}
@@ -67,7 +69,8 @@ func judgeVolumeDisagreement(c *court) {
 	}
 }
 
-// judgeStrainRange: amplitude of the area strain.
+// judgeStrainRange: amplitude of the area strain. Above: review or repeat; below
+// the least: review. Cells only.
 func judgeStrainRange(c *court) {
 	c.oscillations(func(s *run.Segment) {
 		q := s.AreaStrainAmplitude
@@ -80,7 +83,7 @@ func judgeStrainRange(c *court) {
 				"Use a smaller amplitude.")
 			return
 		}
-		if least := c.l.StrainLeast / 100; q.Value+2*q.U < least {
+		if least := c.l.StrainLeast / 100; below(q.Value, q.U, least) {
 			c.find(run.ToReview, within(s), value{q.Value, q.U, least, "1"},
 				fmt.Sprintf("The area is strained by only ±%s from %.0f s to %.0f s (at least %s).", percent(q.Value), s.FromS, s.ToS, percent(least)),
 				"Use a larger amplitude, or press the cell flatter: near the round shape the area hardly changes with height.")
@@ -88,7 +91,9 @@ func judgeStrainRange(c *court) {
 	})
 }
 
-// judgeContactLoss: time without force though the plate is down.
+// judgeContactLoss: time without force though the plate is down, s, summed over
+// the run; the analysis has found each stretch beyond its own noise. Repeat;
+// cells only.
 func judgeContactLoss(c *court) {
 	if !c.cell() {
 		return
@@ -116,10 +121,12 @@ func (c *court) lostIn(s *run.Segment) bool {
 	return false
 }
 
-// judgeAdhesion: pull on the plate as it leaves, over the largest load.
+// judgeAdhesion: pull on the plate as it leaves, over the largest load. It waits
+// until the plate has left once: until then pull and zero of the force still
+// move. Review or repeat; cells only.
 func judgeAdhesion(c *court) {
 	a := c.e.Adhesion
-	if a == nil || !c.cell() || !(a.MaxLoadN > 0) || !beyond(a.PullN.Value, a.PullN.U, c.l.AdhesionLeast*1e-12) {
+	if a == nil || !(c.over || c.ended(run.Retract)) || !c.cell() || !(a.MaxLoadN > 0) || !beyond(a.PullN.Value, a.PullN.U, c.l.AdhesionLeast*1e-12) {
 		return
 	}
 	rel, u := a.PullN.Value/a.MaxLoadN, a.PullN.U/a.MaxLoadN
@@ -133,14 +140,26 @@ func judgeAdhesion(c *court) {
 }
 
 // judgeNoContact: a cell run that is over and in which the plate never touched
-// a cell.
+// a cell. It is said earlier only where the plate has come down and oscillates
+// without an answer; a mere stop on the way down says nothing. Repeat, or info
+// where only the zero of the force is not known; cells only.
 func judgeNoContact(c *court) {
-	if !c.cell() || !c.over || c.e.Trouble != nil || c.e.Samples == 0 {
+	if !c.cell() || c.e.Trouble != nil || c.e.Samples == 0 {
 		return
 	}
-	pressed := false
-	for _, s := range c.e.Segments {
+	pressed, unanswered := false, false
+	for i := range c.e.Segments {
+		s := &c.e.Segments[i]
 		pressed = pressed || s.TensionNPerM != nil
+		unanswered = unanswered || (s.Mode == run.Oscillation && c.silent(s))
+	}
+	if !c.over {
+		if c.e.Contact == nil && !pressed && unanswered && c.ended(run.Approach) {
+			c.find(run.ToRepeat, c.whole(), value{},
+				"The plate oscillates but has not pressed on a cell: the force did not rise on the way down.",
+				"Stop, find the cell under the plate, or go lower, and repeat.")
+		}
+		return
 	}
 	switch {
 	case c.e.Contact == nil && !pressed && len(c.e.Volumes) == 0 && !c.approached():
@@ -161,6 +180,16 @@ func judgeNoContact(c *court) {
 func (c *court) approached() bool {
 	for _, s := range c.e.Segments {
 		if s.Mode == run.Approach {
+			return true
+		}
+	}
+	return false
+}
+
+// ended tells whether a segment of this mode is over.
+func (c *court) ended(m run.Mode) bool {
+	for _, s := range c.e.Segments[:min(max(0, c.e.Ended), len(c.e.Segments))] {
+		if s.Mode == m {
 			return true
 		}
 	}

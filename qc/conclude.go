@@ -59,6 +59,23 @@ func cellState(e run.Estimates) *run.CellState {
 	return s
 }
 
+// decay copies a decay all of whose numbers are finite: half a law says nothing.
+func decay(d *run.Decay) *run.Decay {
+	if d == nil {
+		return nil
+	}
+	for _, x := range []float64{d.PlateauNPerM, d.DropNPerM, d.TimeS, d.Exponent} {
+		if run.Number(x) == nil {
+			return nil
+		}
+	}
+	out := *d
+	if d.EvidenceRatio != nil {
+		out.EvidenceRatio = run.Number(*d.EvidenceRatio)
+	}
+	return &out
+}
+
 // segments copies what is finite: one odd number must not spoil a document.
 func segments(in []run.Segment) []run.Segment {
 	out := make([]run.Segment, len(in))
@@ -77,6 +94,7 @@ func segments(in []run.Segment) []run.Segment {
 				*n = run.Number(**n)
 			}
 		}
+		s.Relaxation = decay(s.Relaxation)
 		s.FromS, s.ToS, s.Cycles = finite(s.FromS), finite(s.ToS), finite(s.Cycles)
 		out[i] = s
 	}

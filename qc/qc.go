@@ -111,6 +111,9 @@ func finite(x float64) float64 {
 // value right at the limit, normal distribution).
 func beyond(x, u, limit float64) bool { return math.Abs(x)-2*u > limit }
 
+// below is beyond for a limit that is passed downward.
+func below(x, u, limit float64) bool { return x+2*u < limit }
+
 // graded returns the severity of a value with two limits, "" below both.
 func graded(x, u, review, repeat float64) (s run.Severity, limit float64) {
 	switch {

@@ -9,27 +9,47 @@ import (
 	"platen/pipeline/run"
 )
 
-// judgeClipping: share of samples that stand still at the extreme force.
+// judgeClipping: share of samples that stand still at the extreme of a channel;
+// a count, without noise. Review or repeat for force and deflection; review for
+// the height, whose cut peaks spoil an amplitude but not the load. A channel
+// that never changes is no measurement: repeat. For every kind of run.
 func judgeClipping(c *court) {
 	for _, k := range c.e.Clips {
 		at := scope{nil, k.FromS, k.ToS}
 		if k.Dead {
 			c.find(run.ToRepeat, at, value{k.Fraction, 0, c.l.ClippedRepeat / 100, "1"},
 				fmt.Sprintf("The %s never changes: all %d samples are the same.", k.Channel, k.Samples),
-				"Check that the force sensor is connected and the right channel is exported.")
+				"Check that the sensor is connected and the right channel is exported.")
 			continue
 		}
 		sev, limit := graded(k.Fraction, 0, c.l.ClippedReview/100, c.l.ClippedRepeat/100)
 		if sev == "" {
 			continue
 		}
+		extreme, advice := fmt.Sprintf("%.4g nN", 1e9*k.Value), "Lower the sensor's gain, its offset or the load, and repeat this cell."
+		switch k.Channel {
+		case "deflection":
+			extreme = fmt.Sprintf("%.4g µm", 1e6*k.Value)
+		case "height":
+			sev, limit = run.ToReview, c.l.ClippedReview/100
+			extreme, advice = fmt.Sprintf("%.4g µm", 1e6*k.Value), "Move the oscillation away from the end of the plate's travel."
+		}
 		c.find(sev, at, value{k.Fraction, 0, limit, "1"},
-			fmt.Sprintf("The %s is clipped at %.4g nN: %d samples from %.0f s to %.0f s stand still there.", k.Channel, 1e9*k.Value, k.Samples, k.FromS, k.ToS),
-			"Lower the sensor's gain, its offset or the load, and repeat this cell.")
+			fmt.Sprintf("The %s is clipped at %s: %d samples from %.0f s to %.0f s stand still there.", k.Channel, extreme, k.Samples, k.FromS, k.ToS),
+			advice)
 	}
 }
 
-// judgeSampleGap: time missing between samples, s.
+// times says how often.
+func times(n int) string {
+	if n == 1 {
+		return "once"
+	}
+	return fmt.Sprintf("%d times", n)
+}
+
+// judgeSampleGap: time missing between samples, s. Info below the limit for
+// review; for every kind of run.
 func judgeSampleGap(c *court) {
 	s := c.e.Sampling
 	if s.Gaps == 0 {
@@ -39,16 +59,13 @@ func judgeSampleGap(c *court) {
 	if sev == "" {
 		sev = run.Info
 	}
-	times := "once"
-	if s.Gaps > 1 {
-		times = fmt.Sprintf("%d times", s.Gaps)
-	}
 	c.find(sev, scope{nil, s.Longest.FromS, s.Longest.ToS}, value{s.MissingS, 0, limit, "s"},
-		fmt.Sprintf("Samples are missing %s, %.0f ms in all; the longest gap is at %.2f s.", times, 1e3*s.MissingS, s.Longest.FromS),
+		fmt.Sprintf("Samples are missing %s, %.0f ms in all; the longest gap is at %.2f s.", times(s.Gaps), 1e3*s.MissingS, s.Longest.FromS),
 		"Close other programs on the instrument's computer; write to a local disk.")
 }
 
-// judgeTimeOrder: time stamps that step back.
+// judgeTimeOrder: number of time stamps that step back beyond their rounding.
+// Any is for review, more than the limit to repeat; for every kind of run.
 func judgeTimeOrder(c *court) {
 	s := c.e.Sampling
 	if s.Backward == 0 {
@@ -59,12 +76,13 @@ func judgeTimeOrder(c *court) {
 		sev = run.ToRepeat
 	}
 	c.find(sev, scope{nil, s.FirstBackS, c.e.ToS}, value{float64(s.Backward), 0, c.l.StepsBackRepeat, "steps"},
-		fmt.Sprintf("Time goes backward %d time(s), first at sample %d (%.4g s): rows are out of order or written twice.", s.Backward, s.FirstBackAt+1, s.FirstBackS),
+		fmt.Sprintf("Time goes backward %s, first at sample %d (%.4g s): rows are out of order or written twice.", times(s.Backward), s.FirstBackAt+1, s.FirstBackS),
 		"Export the run again; if it stays so, look for a clock that is set while recording.")
 }
 
 // judgeThermal: whether a thermal run gives a spring constant, and how well the
-// fitted spectrum describes the measured one.
+// fitted spectrum describes the measured one: mean squared residual over what
+// the averages allow. Repeat or review; thermal runs only, once they are over.
 func judgeThermal(c *court) {
 	r := c.e.Reference
 	if c.e.Header.Kind != run.KindThermal || !c.over || c.e.Trouble != nil {
@@ -85,8 +103,9 @@ func judgeThermal(c *court) {
 	}
 }
 
-// judgeTruncated: share of the declared samples that are missing, once the run
-// is over.
+// judgeTruncated: share of the declared samples that are missing, or NUL bytes at
+// the end, once the run is over. Review, or repeat where more than the limit is
+// missing; for every kind of run.
 func judgeTruncated(c *court) {
 	if !c.over || c.e.Trouble != nil {
 		return
@@ -107,7 +126,8 @@ func judgeTruncated(c *court) {
 	}
 }
 
-// judgeUnreadable: bytes that are no run, or no longer one.
+// judgeUnreadable: bytes that are no run, or no longer one. Repeat where it was
+// one; review where it may never have been meant to be.
 func judgeUnreadable(c *court) {
 	t := c.e.Trouble
 	if t == nil {

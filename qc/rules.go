@@ -78,10 +78,10 @@ var table = []ruling{
 	}, judgeClipping},
 	{Rule{
 		Name: "no-contact", What: "whether the plate touched a cell at all", Unit: "",
-		Limits: "repeat",
-		Reason: "without contact there is nothing to analyse; where the run starts in contact, the zero of the force is taken as exported and this is noted",
-		Advice: "find the cell; start the approach higher or go lower",
-		Cell:   true,
+		Limits:   "repeat",
+		Reason:   "without contact there is nothing to analyse; where the run starts in contact, the zero of the force is taken as exported and this is noted",
+		Advice:   "find the cell; start the approach higher or go lower",
+		WhileRun: true, Cell: true,
 	}, judgeNoContact},
 	{Rule{
 		Name: "contact-loss", What: "time without force though the plate is down on the cell", Unit: "s",

@@ -44,8 +44,9 @@ func sound() run.Estimates {
 			{Index: 0, Mode: run.Hold, FromS: 0, ToS: 4, HeightRatio: q(1.1, 0.003)},
 			{Index: 1, Mode: run.Hold, FromS: 10, ToS: 18, HeightRatio: q(0.6, 0.002), HeightSlopeMPerS: q(0, 1e-11), TensionNPerM: q(1e-3, 5e-5), TensionSlope: q(-1e-6, 1e-7)},
 			oscillating(),
+			{Index: 3, Mode: run.Retract, FromS: 34, ToS: 37},
 		},
-		Ended: 3,
+		Ended: 4,
 	}
 }
 
@@ -55,104 +56,102 @@ func osc(change func(*run.Segment)) func(*run.Estimates) {
 
 // Each case spoils one thing. Values right at a limit, and values beyond it by
 // less than twice their uncertainty, must not fire; limits are the defaults.
+var ruleCases = []struct {
+	name  string
+	spoil func(*run.Estimates)
+	rule  string // "" for none
+	sev   run.Severity
+}{
+	{"sound", func(*run.Estimates) {}, "", ""},
+
+	{"drift at the limit", func(e *run.Estimates) { e.Baseline.SlopeN = *q(5e-12, 1e-14) }, "", ""},
+	{"drift beyond, but within noise", func(e *run.Estimates) { e.Baseline.SlopeN = *q(8e-12, 2e-12) }, "", ""},
+	{"drift", func(e *run.Estimates) { e.Baseline.SlopeN = *q(-8e-12, 1e-12) }, "force-drift", run.ToReview},
+	{"strong drift", func(e *run.Estimates) { e.Baseline.SlopeN = *q(30e-12, 1e-12) }, "force-drift", run.ToRepeat},
+
+	{"plate creeps", osc(func(s *run.Segment) { s.HeightSlopeMPerS = q(15e-9, 1e-9) }), "height-drift", run.ToReview},
+	{"plate runs away", osc(func(s *run.Segment) { s.HeightSlopeMPerS = q(-50e-9, 1e-9) }), "height-drift", run.ToRepeat},
+	{"plate creeps above the cell", func(e *run.Estimates) { e.Segments[0].HeightSlopeMPerS = q(50e-9, 1e-9) }, "", ""},
+
+	{"tension falls", osc(func(s *run.Segment) { s.TensionSlope = q(-0.3*1e-3/60, 1e-8) }), "tension-drift", run.ToReview},
+	{"tension falls, not known well", osc(func(s *run.Segment) { s.TensionSlope = q(-0.3*1e-3/60, 0.1*1e-3/60) }), "", ""},
+	{"tension collapses", osc(func(s *run.Segment) { s.TensionSlope = q(-0.9*1e-3/60, 1e-8) }), "tension-drift", run.ToRepeat},
+	{"tension relaxes during a hold", func(e *run.Estimates) { e.Segments[1].TensionSlope = q(-0.9*1e-3/60, 1e-8) }, "tension-drift", run.Info},
+
+	// 3.2 % are 30 dB and 10 % are 20 dB. The scatter of ten batches is itself
+	// known to 2 dB: it counts from 4 dB beyond the limits, 5.1 % and 16 %.
+	{"weak signal, not surely", osc(func(s *run.Segment) { s.StorageScatter = n(0.05 * 12.65e-3) }), "", ""},
+	{"weak signal", osc(func(s *run.Segment) { s.StorageScatter = n(0.06 * 12.65e-3) }), "low-snr", run.ToReview},
+	{"very weak signal, not surely", osc(func(s *run.Segment) { s.StorageScatter = n(0.15 * 12.65e-3) }), "low-snr", run.ToReview},
+	{"very weak signal", osc(func(s *run.Segment) { s.StorageScatter = n(0.17 * 12.65e-3) }), "low-snr", run.ToRepeat},
+	{"samples drown", osc(func(s *run.Segment) { s.SNRdB = n(2) }), "low-snr", run.ToReview},
+	{"no answer", osc(func(s *run.Segment) { s.StorageNPerM, s.LossNPerM, s.PhaseDeg, s.SNRdB = nil, nil, nil, n(-20) }), "low-snr", run.ToRepeat},
+	{"two cycles are too early to say", osc(func(s *run.Segment) { s.Cycles = 2.95; s.StorageScatter = n(0.15 * 12.6e-3) }), "", ""},
+
+	{"cell shrinks", func(e *run.Estimates) { e.Imaged.Change = *q(-0.06, 0.005) }, "volume-change", run.ToReview},
+	{"cell swells much", func(e *run.Estimates) { e.Segments[2].VolumeChange = q(0.12, 0.01) }, "volume-change", run.ToRepeat},
+	{"volume change within noise", func(e *run.Estimates) { e.Imaged.Change = *q(-0.06, 0.02) }, "", ""},
+	{"sizes disagree", func(e *run.Estimates) { e.Volumes[1].RadiusM = *q(10.2e-6, 5e-8) }, "volume-disagreement", run.ToReview},
+	{"sizes disagree within their uncertainty", func(e *run.Estimates) { e.Volumes[1].RadiusM = *q(10.2e-6, 4e-7) }, "", ""},
+
+	// A bare membrane ruptures at an area strain of 3 to 5 % (BioNumbers
+	// 110907): from 3 % on the run is looked at.
+	{"strained to rupture of a membrane", osc(func(s *run.Segment) { s.AreaStrainAmplitude = q(0.04, 1e-4) }), "strain-range", run.ToReview},
+	{"strained far beyond", osc(func(s *run.Segment) { s.AreaStrainAmplitude = q(0.08, 1e-4) }), "strain-range", run.ToRepeat},
+	{"hardly strained", osc(func(s *run.Segment) { s.AreaStrainAmplitude = q(2e-4, 1e-5) }), "strain-range", run.ToReview},
+
+	{"bent loop", osc(func(s *run.Segment) { s.Distortion = n(0.15) }), "distortion", run.ToReview},
+	{"broken loop", osc(func(s *run.Segment) { s.Distortion = n(0.4) }), "distortion", run.ToRepeat},
+
+	{"negative phase", osc(func(s *run.Segment) { s.PhaseDeg = q(-5, 1) }), "phase-range", run.ToReview},
+	{"negative phase within noise", osc(func(s *run.Segment) { s.PhaseDeg = q(-5, 3) }), "", ""},
+	{"phase above 90", osc(func(s *run.Segment) { s.PhaseDeg = q(95, 1) }), "phase-range", run.ToReview},
+
+	{"two cycles", osc(func(s *run.Segment) { s.Cycles = 2 }), "few-cycles", run.ToReview},
+	{"three cycles, borders not quite found", osc(func(s *run.Segment) { s.Cycles = 2.95 }), "", ""},
+
+	{"contact lost", func(e *run.Estimates) { e.Losses = []run.Interval{{FromS: 24, ToS: 30}} }, "contact-loss", run.ToRepeat},
+	{"a blink", func(e *run.Estimates) { e.Losses = []run.Interval{{FromS: 24, ToS: 24.4}} }, "", ""},
+
+	{"clipped", func(e *run.Estimates) {
+		e.Clips = []run.Clip{{Channel: "force", Samples: 400, Longest: 60, Fraction: 0.01, Value: 2e-8}}
+	}, "clipping", run.ToRepeat},
+	{"clipped once", func(e *run.Estimates) {
+		e.Clips = []run.Clip{{Channel: "force", Samples: 12, Longest: 12, Fraction: 0.0003, Value: 2e-8}}
+	}, "clipping", run.ToReview},
+	{"dead sensor", func(e *run.Estimates) {
+		e.Clips = []run.Clip{{Channel: "force", Samples: 40000, Longest: 40000, Fraction: 1, Dead: true}}
+	}, "clipping", run.ToRepeat},
+
+	{"one sample lost", func(e *run.Estimates) { e.Sampling.Gaps, e.Sampling.MissingS = 1, 0.001 }, "sample-gap", run.Info},
+	{"a gap", func(e *run.Estimates) { e.Sampling.Gaps, e.Sampling.MissingS = 2, 0.4 }, "sample-gap", run.ToReview},
+	{"a long gap", func(e *run.Estimates) { e.Sampling.Gaps, e.Sampling.MissingS = 1, 5 }, "sample-gap", run.ToRepeat},
+
+	{"one step back", func(e *run.Estimates) { e.Sampling.Backward = 1 }, "time-order", run.ToReview},
+	{"many steps back", func(e *run.Estimates) { e.Sampling.Backward = 9 }, "time-order", run.ToRepeat},
+
+	{"sticks", func(e *run.Estimates) { e.Adhesion.PullN = *q(3e-9, 1e-11) }, "adhesion", run.ToReview},
+	{"sticks fast", func(e *run.Estimates) { e.Adhesion.PullN = *q(9e-9, 1e-11) }, "adhesion", run.ToRepeat},
+	{"a small pull under a small load", func(e *run.Estimates) { e.Adhesion.PullN, e.Adhesion.MaxLoadN = *q(90e-12, 1e-12), 2e-10 }, "", ""},
+
+	{"nothing touched", func(e *run.Estimates) { e.Contact, e.Segments, e.Adhesion = nil, e.Segments[:1], nil }, "no-contact", run.ToRepeat},
+	{"starts in contact", func(e *run.Estimates) { e.Contact, e.Baseline = nil, nil }, "no-contact", run.Info},
+
+	{"cut short", func(e *run.Estimates) { e.Samples = 36000 }, "truncated", run.ToReview},
+	{"cut in half", func(e *run.Estimates) { e.Samples = 20000 }, "truncated", run.ToRepeat},
+	{"empty tail", func(e *run.Estimates) { e.NULTail = 4096 }, "truncated", run.ToReview},
+
+	{"a broken run", func(e *run.Estimates) {
+		e.Trouble = &run.Trouble{Line: 7, Byte: 99, Want: "a number", Got: "x", Fix: "export numbers", IsRun: true}
+	}, "unreadable", run.ToRepeat},
+	{"no run", func(e *run.Estimates) {
+		e.Trouble = &run.Trouble{Want: "text", Got: "a picture", Fix: "move it elsewhere"}
+	}, "unreadable", run.ToReview},
+}
+
 func TestRules(t *testing.T) {
-	cases := []struct {
-		name  string
-		spoil func(*run.Estimates)
-		rule  string // "" for none
-		sev   run.Severity
-	}{
-		{"sound", func(*run.Estimates) {}, "", ""},
-
-		{"drift at the limit", func(e *run.Estimates) { e.Baseline.SlopeN = *q(5e-12, 1e-14) }, "", ""},
-		{"drift beyond, but within noise", func(e *run.Estimates) { e.Baseline.SlopeN = *q(8e-12, 2e-12) }, "", ""},
-		{"drift", func(e *run.Estimates) { e.Baseline.SlopeN = *q(-8e-12, 1e-12) }, "force-drift", run.ToReview},
-		{"strong drift", func(e *run.Estimates) { e.Baseline.SlopeN = *q(30e-12, 1e-12) }, "force-drift", run.ToRepeat},
-
-		{"plate creeps", osc(func(s *run.Segment) { s.HeightSlopeMPerS = q(15e-9, 1e-9) }), "height-drift", run.ToReview},
-		{"plate runs away", osc(func(s *run.Segment) { s.HeightSlopeMPerS = q(-50e-9, 1e-9) }), "height-drift", run.ToRepeat},
-		{"plate creeps above the cell", func(e *run.Estimates) { e.Segments[0].HeightSlopeMPerS = q(50e-9, 1e-9) }, "", ""},
-
-		{"tension falls", osc(func(s *run.Segment) { s.TensionSlope = q(-0.3*1e-3/60, 1e-8) }), "tension-drift", run.ToReview},
-		{"tension falls, not known well", osc(func(s *run.Segment) { s.TensionSlope = q(-0.3*1e-3/60, 0.1*1e-3/60) }), "", ""},
-		{"tension collapses", osc(func(s *run.Segment) { s.TensionSlope = q(-0.9*1e-3/60, 1e-8) }), "tension-drift", run.ToRepeat},
-		{"tension relaxes during a hold", func(e *run.Estimates) { e.Segments[1].TensionSlope = q(-0.9*1e-3/60, 1e-8) }, "tension-drift", run.Info},
-
-		{"weak signal", osc(func(s *run.Segment) { s.StorageScatter = n(0.05 * 12.6e-3) }), "low-snr", run.ToReview},
-		{"very weak signal", osc(func(s *run.Segment) { s.StorageScatter = n(0.15 * 12.6e-3) }), "low-snr", run.ToRepeat},
-		{"samples drown", osc(func(s *run.Segment) { s.SNRdB = n(2) }), "low-snr", run.ToReview},
-		{"no answer", osc(func(s *run.Segment) { s.StorageNPerM, s.LossNPerM, s.PhaseDeg, s.SNRdB = nil, nil, nil, n(-20) }), "low-snr", run.ToRepeat},
-		{"two cycles are too early to say", osc(func(s *run.Segment) { s.Cycles = 2.95; s.StorageScatter = n(0.15 * 12.6e-3) }), "", ""},
-
-		{"cell shrinks", func(e *run.Estimates) { e.Imaged.Change = *q(-0.06, 0.005) }, "volume-change", run.ToReview},
-		{"cell swells much", func(e *run.Estimates) { e.Segments[2].VolumeChange = q(0.12, 0.01) }, "volume-change", run.ToRepeat},
-		{"volume change within noise", func(e *run.Estimates) { e.Imaged.Change = *q(-0.06, 0.02) }, "", ""},
-		{"sizes disagree", func(e *run.Estimates) { e.Volumes[1].RadiusM = *q(10.2e-6, 5e-8) }, "volume-disagreement", run.ToReview},
-		{"sizes disagree within their uncertainty", func(e *run.Estimates) { e.Volumes[1].RadiusM = *q(10.2e-6, 4e-7) }, "", ""},
-
-		// A bare membrane ruptures at an area strain of 3 to 5 % (BioNumbers
-		// 110907): from 3 % on the run is looked at.
-		{"strained to rupture of a membrane", osc(func(s *run.Segment) { s.AreaStrainAmplitude = q(0.04, 1e-4) }), "strain-range", run.ToReview},
-		{"strained far beyond", osc(func(s *run.Segment) { s.AreaStrainAmplitude = q(0.08, 1e-4) }), "strain-range", run.ToRepeat},
-		{"hardly strained", osc(func(s *run.Segment) { s.AreaStrainAmplitude = q(2e-4, 1e-5) }), "strain-range", run.ToReview},
-
-		{"bent loop", osc(func(s *run.Segment) { s.Distortion = n(0.15) }), "distortion", run.ToReview},
-		{"broken loop", osc(func(s *run.Segment) { s.Distortion = n(0.4) }), "distortion", run.ToRepeat},
-
-		{"negative phase", osc(func(s *run.Segment) { s.PhaseDeg = q(-5, 1) }), "phase-range", run.ToReview},
-		{"negative phase within noise", osc(func(s *run.Segment) { s.PhaseDeg = q(-5, 3) }), "", ""},
-		{"phase above 90", osc(func(s *run.Segment) { s.PhaseDeg = q(95, 1) }), "phase-range", run.ToReview},
-
-		{"two cycles", osc(func(s *run.Segment) { s.Cycles = 2 }), "few-cycles", run.ToReview},
-		{"three cycles, borders not quite found", osc(func(s *run.Segment) { s.Cycles = 2.95 }), "", ""},
-
-		{"contact lost", func(e *run.Estimates) { e.Losses = []run.Interval{{FromS: 24, ToS: 30}} }, "contact-loss", run.ToRepeat},
-		{"a blink", func(e *run.Estimates) { e.Losses = []run.Interval{{FromS: 24, ToS: 24.4}} }, "", ""},
-
-		{"clipped", func(e *run.Estimates) {
-			e.Clips = []run.Clip{{Channel: "force", Samples: 400, Longest: 60, Fraction: 0.01, Value: 2e-8}}
-		}, "clipping", run.ToRepeat},
-		{"clipped once", func(e *run.Estimates) {
-			e.Clips = []run.Clip{{Channel: "force", Samples: 12, Longest: 12, Fraction: 0.0003, Value: 2e-8}}
-		}, "clipping", run.ToReview},
-		{"dead sensor", func(e *run.Estimates) {
-			e.Clips = []run.Clip{{Channel: "force", Samples: 40000, Longest: 40000, Fraction: 1, Dead: true}}
-		}, "clipping", run.ToRepeat},
-
-		{"one sample lost", func(e *run.Estimates) { e.Sampling.Gaps, e.Sampling.MissingS = 1, 0.001 }, "sample-gap", run.Info},
-		{"a gap", func(e *run.Estimates) { e.Sampling.Gaps, e.Sampling.MissingS = 2, 0.4 }, "sample-gap", run.ToReview},
-		{"a long gap", func(e *run.Estimates) { e.Sampling.Gaps, e.Sampling.MissingS = 1, 5 }, "sample-gap", run.ToRepeat},
-
-		{"one step back", func(e *run.Estimates) { e.Sampling.Backward = 1 }, "time-order", run.ToReview},
-		{"many steps back", func(e *run.Estimates) { e.Sampling.Backward = 9 }, "time-order", run.ToRepeat},
-
-		{"sticks", func(e *run.Estimates) { e.Adhesion.PullN = *q(3e-9, 1e-11) }, "adhesion", run.ToReview},
-		{"sticks fast", func(e *run.Estimates) { e.Adhesion.PullN = *q(9e-9, 1e-11) }, "adhesion", run.ToRepeat},
-		{"a small pull under a small load", func(e *run.Estimates) { e.Adhesion.PullN, e.Adhesion.MaxLoadN = *q(90e-12, 1e-12), 2e-10 }, "", ""},
-
-		{"nothing touched", func(e *run.Estimates) { e.Contact, e.Segments, e.Adhesion = nil, e.Segments[:1], nil }, "no-contact", run.ToRepeat},
-		{"starts in contact", func(e *run.Estimates) { e.Contact, e.Baseline = nil, nil }, "no-contact", run.Info},
-
-		{"cut short", func(e *run.Estimates) { e.Samples = 36000 }, "truncated", run.ToReview},
-		{"cut in half", func(e *run.Estimates) { e.Samples = 20000 }, "truncated", run.ToRepeat},
-		{"empty tail", func(e *run.Estimates) { e.NULTail = 4096 }, "truncated", run.ToReview},
-
-		{"thermal without a peak", func(e *run.Estimates) {
-			*e = run.Estimates{Header: run.Header{Kind: run.KindThermal}, Completion: run.ByCount, Samples: 9, Reference: &run.Reference{Why: "it drowns"}}
-		}, "thermal-fit", run.ToRepeat},
-		{"thermal, badly fitted", func(e *run.Estimates) {
-			*e = run.Estimates{Header: run.Header{Kind: run.KindThermal}, Completion: run.ByCount, Samples: 9, Reference: &run.Reference{SpringConstantNPerM: q(0.2, 0.01), Misfit: n(3)}}
-		}, "thermal-fit", run.ToReview},
-
-		{"a broken run", func(e *run.Estimates) {
-			e.Trouble = &run.Trouble{Line: 7, Byte: 99, Want: "a number", Got: "x", Fix: "export numbers", IsRun: true}
-		}, "unreadable", run.ToRepeat},
-		{"no run", func(e *run.Estimates) {
-			e.Trouble = &run.Trouble{Want: "text", Got: "a picture", Fix: "move it elsewhere"}
-		}, "unreadable", run.ToReview},
-	}
 	fired := map[string]bool{}
-	for _, c := range cases {
+	for _, c := range ruleCases {
 		t.Run(c.name, func(t *testing.T) {
 			e := sound()
 			c.spoil(&e)
@@ -180,7 +179,7 @@ func TestRules(t *testing.T) {
 		})
 	}
 	for _, r := range Rules() {
-		if !fired[r.Name] {
+		if !fired[r.Name] && r.Name != "thermal-fit" { // see TestThermalFit
 			t.Errorf("no case fires %s", r.Name)
 		}
 	}
@@ -222,23 +221,6 @@ func TestKinds(t *testing.T) {
 		if fs := Judge(e, Defaults()); len(fs) != 1 || fs[0].Rule != "force-drift" {
 			t.Errorf("%s: %+v", kind, fs)
 		}
-	}
-}
-
-// With the true value at the limit, noise fires a rule in 2.28 % of runs
-// (one-sided two standard deviations, normal tables): of 20,000 at most 519
-// (binomial, three standard deviations above 456).
-func TestFalseAlarms(t *testing.T) {
-	rng := rand.New(rand.NewPCG(1, 2))
-	fired := 0
-	for range 20000 {
-		const u = 0.7e-12
-		if s, _ := graded(5e-12+u*rng.NormFloat64(), u, 5e-12, 20e-12); s != "" {
-			fired++
-		}
-	}
-	if fired > 519 || fired < 393 {
-		t.Errorf("fired %d times of 20000, expected about 456", fired)
 	}
 }
 
@@ -298,15 +280,41 @@ func TestLimitsValidate(t *testing.T) {
 		}
 		l := Defaults()
 		reflect.ValueOf(&l).Elem().Field(i).SetFloat(math.NaN())
-		if err := l.Validate(); err == nil || !strings.Contains(err.Error(), "limits.") {
+		if err := l.Validate(); err == nil || !strings.Contains(err.Error(), "limits."+key+" = NaN: must be ") {
 			t.Errorf("%s = NaN: %v", key, err)
 		}
+		l = Defaults()
+		reflect.ValueOf(&l).Elem().Field(i).SetFloat(math.Inf(1))
+		if err := l.Validate(); err == nil {
+			t.Errorf("%s = +Inf was taken", key)
+		}
 	}
-	l := Defaults()
-	l.ForceDriftReview, l.ForceDriftRepeat = 20, 5
-	if err := l.Validate(); err == nil {
-		t.Error("a review limit beyond the repeat limit was taken")
+	for _, c := range []struct {
+		spoil func(*Limits)
+		want  string
+	}{
+		{func(l *Limits) { l.ForceDriftReview = 25 }, "limits.force_drift_review_pn_per_s = 25: must be from 0 to 20 (force_drift_repeat_pn_per_s)"},
+		{func(l *Limits) { l.GapReview = -1 }, "limits.sample_gap_review_ms = -1: must be from 0 to 2000 (sample_gap_repeat_ms)"},
+		{func(l *Limits) { l.LowSNRRepeat = 31 }, "limits.low_snr_repeat_db = 31: must be from 0 to 30 (low_snr_review_db)"},
+		{func(l *Limits) { l.StrainLeast = 3.5 }, "limits.strain_least_percent = 3.5: must be from 0 to 3 (strain_review_percent)"},
+		{func(l *Limits) { l.TruncatedRepeat = 101 }, "limits.truncated_repeat_percent = 101: must be from 0 to 100"},
+		{func(l *Limits) { l.ContactLoss = -2 }, "limits.contact_loss_repeat_s = -2: must be 0 or more"},
+	} {
+		l := Defaults()
+		c.spoil(&l)
+		if err := l.Validate(); err == nil || err.Error() != c.want {
+			t.Errorf("%v, want %s", err, c.want)
+		}
 	}
+}
+
+func contains(s string, parts ...string) bool {
+	for _, p := range parts {
+		if !strings.Contains(s, p) {
+			return false
+		}
+	}
+	return true
 }
 
 func raisedBy(rule string, s run.Severity) []run.Finding {
@@ -344,20 +352,63 @@ func TestTracker(t *testing.T) {
 	step(nil, 0, 1)
 	step(nil, 0, 0)
 
-	// A value that dithers about its limit for an hour.
-	tr = Tracker{}
-	rng := rand.New(rand.NewPCG(3, 3))
-	raised, cleared := 0, 0
-	for range 4 * 3600 {
-		var fs []run.Finding
-		if rng.IntN(10) == 0 {
-			fs = raisedBy("x", run.ToReview)
-		}
-		r, c := changes(fs)
-		raised, cleared = raised+r, cleared+c
+	// What comes back milder is shown as it is, and its getting worse again is
+	// said; after that it stays.
+	step(raisedBy("x", run.ToReview), 1, 0)
+	step(raisedBy("x", run.ToRepeat), 1, 0)
+	for range 3 * clearAfter {
+		step(nil, 0, 0)
 	}
-	if raised > mostRaises || cleared >= mostRaises {
-		t.Errorf("chatters: raised %d times, cleared %d", raised, cleared)
+	step(raisedBy("x", run.ToRepeat), 0, 0)
+
+	// The same rule in two segments is two warnings, cleared in their order.
+	tr = Tracker{}
+	two := append(raisedBy("x", run.ToReview), raisedBy("x", run.ToReview)...)
+	for i := range two {
+		two[i].Segment = &[]int{4 - i}[0]
+	}
+	step(two, 2, 0)
+	for range clearAfter - 1 {
+		step(nil, 0, 0)
+	}
+	var order []int
+	for _, c := range tr.Update(nil) {
+		order = append(order, *c.Finding.Segment)
+	}
+	if !slices.Equal(order, []int{3, 4}) {
+		t.Errorf("cleared in the order %v", order)
+	}
+}
+
+// A value that dithers about a limit for an hour, with noise and a slow swing,
+// judged four times a second: one raise, one clearing, one raise more, and an
+// escalation in each stretch at most.
+func TestTrackerDoesNotChatter(t *testing.T) {
+	for _, c := range []struct {
+		name       string
+		centre     float64 // pN/s; limits 5 and 20
+		mostRaises int
+	}{{"about review", 5, 2}, {"about repeat", 20, 4}, {"far below", 1, 0}} {
+		for seed := range uint64(3) {
+			rng := rand.New(rand.NewPCG(3, seed))
+			var tr Tracker
+			raised, cleared := 0, 0
+			for i := range 4 * 3600 {
+				e := sound()
+				swing := 0.2 * math.Sin(float64(i)/200)
+				e.Baseline.SlopeN = *q((c.centre*(1+swing)+0.3*rng.NormFloat64())*1e-12, 0.3e-12)
+				for _, ch := range tr.Update(Judge(e, Defaults())) {
+					if ch.Raised {
+						raised++
+					} else {
+						cleared++
+					}
+				}
+			}
+			if raised > c.mostRaises || cleared > 1 || (raised == 0) != (c.mostRaises == 0) {
+				t.Errorf("%s, seed %d: raised %d times, cleared %d", c.name, seed, raised, cleared)
+			}
+		}
 	}
 }
 
@@ -376,6 +427,12 @@ func TestConcludeAlwaysMarshals(t *testing.T) {
 			return nil
 		}
 		return n(odd.Draw(r, "n"))
+	})
+	decays := rapid.Custom(func(r *rapid.T) *run.Decay {
+		if rapid.Bool().Draw(r, "absent") {
+			return nil
+		}
+		return &run.Decay{Law: "exponential", PlateauNPerM: odd.Draw(r, "plateau"), DropNPerM: odd.Draw(r, "drop"), TimeS: odd.Draw(r, "time"), Exponent: odd.Draw(r, "exponent"), EvidenceRatio: number.Draw(r, "evidence")}
 	})
 	rapid.Check(t, func(r *rapid.T) {
 		e := run.Estimates{
@@ -399,7 +456,7 @@ func TestConcludeAlwaysMarshals(t *testing.T) {
 				Index: i, Mode: rapid.SampledFrom([]run.Mode{run.Hold, run.Oscillation}).Draw(r, "mode"), FromS: odd.Draw(r, "s"), ToS: odd.Draw(r, "e"), Cycles: odd.Draw(r, "cycles"),
 				HeightM: quantity.Draw(r, "h"), HeightRatio: quantity.Draw(r, "eta"), HeightSlopeMPerS: quantity.Draw(r, "hs"), TensionNPerM: quantity.Draw(r, "g"), TensionSlope: quantity.Draw(r, "gs"),
 				AreaStrainAmplitude: quantity.Draw(r, "eps"), StorageNPerM: quantity.Draw(r, "k1"), LossNPerM: quantity.Draw(r, "k2"), PhaseDeg: quantity.Draw(r, "ph"),
-				SNRdB: number.Draw(r, "snr"), Distortion: number.Draw(r, "thd"), StorageScatter: number.Draw(r, "u1"), LossScatter: number.Draw(r, "u2"),
+				Relaxation: decays.Draw(r, "decay"), SNRdB: number.Draw(r, "snr"), Distortion: number.Draw(r, "thd"), StorageScatter: number.Draw(r, "u1"), LossScatter: number.Draw(r, "u2"),
 			})
 		}
 		doc := Conclude(e, "id", "file", Defaults(), run.Software{})
@@ -432,6 +489,31 @@ func TestConclude(t *testing.T) {
 		spoil(&e)
 		if Conclude(e, "", "", Defaults(), run.Software{}).Run.Complete {
 			t.Errorf("%s: called complete", name)
+		}
+	}
+}
+
+// A thermal run must give a spring constant from a spectrum that is one.
+func TestThermalFit(t *testing.T) {
+	for _, c := range []struct {
+		name string
+		ref  *run.Reference
+		sev  run.Severity
+	}{
+		{"good", &run.Reference{SpringConstantNPerM: q(0.2, 0.01), Misfit: n(1.1)}, ""},
+		{"at the limit", &run.Reference{SpringConstantNPerM: q(0.2, 0.01), Misfit: n(2)}, ""},
+		{"badly fitted", &run.Reference{SpringConstantNPerM: q(0.2, 0.01), Misfit: n(3)}, run.ToReview},
+		{"without a peak", &run.Reference{Why: "it drowns"}, run.ToRepeat},
+		{"without a deflection", nil, run.ToRepeat},
+	} {
+		e := run.Estimates{Header: run.Header{Kind: run.KindThermal}, Completion: run.ByCount, Samples: 9, Reference: c.ref}
+		fs := Judge(e, Defaults())
+		if (c.sev == "") != (len(fs) == 0) || (c.sev != "" && (fs[0].Rule != "thermal-fit" || fs[0].Severity != c.sev)) {
+			t.Errorf("%s: %+v", c.name, fs)
+		}
+		e.Completion = run.Growing
+		if fs := Judge(e, Defaults()); len(fs) != 0 {
+			t.Errorf("%s, growing: %+v", c.name, fs)
 		}
 	}
 }

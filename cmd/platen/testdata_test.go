@@ -25,7 +25,7 @@ func made() map[string]phantom.Spec {
 	session := phantom.Session(42)
 	specs := map[string]phantom.Spec{}
 	for i, name := range []string{
-		"accept_good_cell", "accept_end_mark", "repeat_force_drift", "repeat_low_snr", "repeat_volume_change",
+		"accept_good_cell", "accept_end_mark", "repeat_force_drift", "review_low_snr", "repeat_volume_change",
 		"repeat_contact_loss", "repeat_clipping", "review_sample_gap", "repeat_adhesion", "accept_blank",
 		"repeat_truncated",
 	} {
