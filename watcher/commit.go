@@ -2,6 +2,7 @@ package watcher
 
 import (
 	"context"
+	"slices"
 	"sync"
 	"time"
 
@@ -30,8 +31,13 @@ type committer struct {
 	stored []commit // not yet reported
 }
 
-// mostAtOnce bounds a transaction: a hundred results take 5 ms.
-const mostAtOnce = 100
+const (
+	// mostAtOnce bounds a transaction: a hundred results take 5 ms.
+	mostAtOnce = 100
+	// Pauses between attempts while the store fails.
+	firstPause   = 250 * time.Millisecond
+	longestPause = 30 * time.Second
+)
 
 func newCommitter(s Store, l *sessionlog.Log) *committer {
 	return &committer{store: s, log: l, wake: make(chan struct{}, 1)}
@@ -56,7 +62,7 @@ func (c *committer) waiting() int {
 
 // run stores until ctx ends, and then what is still waiting, once.
 func (c *committer) run(ctx context.Context) {
-	pause := 250 * time.Millisecond
+	pause := firstPause
 	failed := false
 	for {
 		batch := c.take()
@@ -71,27 +77,61 @@ func (c *committer) run(ctx context.Context) {
 				continue
 			}
 		}
-		err := c.storeAndSay(batch)
+		stored, refused, untried, err := c.storeWhatGoes(batch)
+		c.release(stored, untried, refused)
+		if len(stored) > 0 {
+			pause = firstPause
+		}
 		if err == nil {
 			if failed {
-				failed, pause = false, 250*time.Millisecond
+				failed = false
 				c.log.StoreBack()
 			}
-			c.release(nil, batch)
 			continue
 		}
 		if !failed {
 			failed = true
 			c.log.StoreTrouble(err)
 		}
-		c.release(batch, nil)
 		select {
 		case <-time.After(pause):
+		case <-c.wake: // a new result may be taken where those that wait are not
 		case <-ctx.Done():
 			return // they are analysed again at the next start
 		}
-		pause = min(2*pause, 30*time.Second)
+		pause = min(2*pause, longestPause)
 	}
+}
+
+// storeWhatGoes stores a batch in one transaction or, where that fails, result
+// by result, so that one that the store refuses does not keep back the others.
+// After a few failures in a row it is the store, not the results: the rest is
+// left untried. err is the first failure of a single result.
+func (c *committer) storeWhatGoes(batch []commit) (stored, refused, untried []commit, err error) {
+	whole := c.storeAndSay(batch)
+	if whole == nil {
+		return batch, nil, nil, nil
+	}
+	if len(batch) == 1 {
+		return nil, batch, nil, whole
+	}
+	const inARow = 3
+	failures := 0
+	for i, x := range batch {
+		one := c.storeAndSay(batch[i : i+1])
+		if one == nil {
+			stored, failures = append(stored, x), 0
+			continue
+		}
+		if err == nil {
+			err = one
+		}
+		refused = append(refused, x)
+		if failures++; failures == inARow {
+			return stored, refused, batch[i+1:], err
+		}
+	}
+	return stored, refused, nil, err
 }
 
 func (c *committer) take() []commit {
@@ -104,12 +144,12 @@ func (c *committer) take() []commit {
 	return batch
 }
 
-// release ends a batch; back holds what must be tried again, stored what is
-// done.
-func (c *committer) release(back, stored []commit) {
+// release ends a batch: stored is done, untried is next, refused is tried
+// again after all others.
+func (c *committer) release(stored, untried, refused []commit) {
 	c.mu.Lock()
 	defer c.mu.Unlock()
-	c.queue = append(append([]commit{}, back...), c.queue...)
+	c.queue = slices.Concat(untried, c.queue, refused)
 	c.active = 0
 	c.stored = append(c.stored, stored...)
 }

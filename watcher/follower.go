@@ -13,7 +13,6 @@ import (
 	"sync/atomic"
 	"time"
 
-	"platen/pipeline"
 	"platen/pipeline/run"
 	"platen/qc"
 	"platen/store"
@@ -41,10 +40,11 @@ type follower struct {
 
 	old     bool // it was finished before the service started
 	started bool
-	reading *pipeline.Reading
+	reading reading
 	offset  int64
 	head    []byte // the first bytes read,
 	seam    []byte // and the last: they must still be there before more is read
+	ending  bool   // nothing more is waited for: NUL bytes at the end are read too
 	size    int64
 	modTime time.Time
 	grew    time.Time // when the file last changed, as far as a worker saw
@@ -56,25 +56,30 @@ type follower struct {
 }
 
 const (
+	// NUL bytes at the end that fill the seam may be room that the instrument
+	// has yet to write to, and are held back; fewer are within the seam.
 	seamBytes   = 256
 	stepBytes   = 4 << 20 // read in one step, so that others get their turn
 	readBytes   = 256 << 10
 	judgeEvery  = 250 * time.Millisecond
 	retryAfter  = 500 * time.Millisecond
 	retryLatest = 30 * time.Second
+	// A run is not given up while the whole folder is away, as a share that
+	// drops, before so long.
+	awayMost = time.Minute
 )
 
-func (f *follower) newer(g *follower) bool {
-	if !f.changed.Equal(g.changed) {
-		return f.changed.After(g.changed)
+// byAge orders files by when they changed, oldest first.
+func byAge(f, g *follower) int {
+	if c := f.changed.Compare(g.changed); c != 0 {
+		return c
 	}
-	a, b := f.told.Load(), g.told.Load()
-	return a.ModTime.After(b.ModTime)
+	return f.told.Load().ModTime.Compare(g.told.Load().ModTime)
 }
 
 // safeStep steps the file; if the program itself fails on it, that is the
 // file's result, and the others go on.
-func (f *follower) safeStep() {
+func (f *follower) safeStep(block []byte) {
 	defer func() {
 		if p := recover(); p != nil {
 			f.s.c.Log.Defect(f.path, p, debug.Stack())
@@ -84,12 +89,12 @@ func (f *follower) safeStep() {
 			}}, f.noID())
 		}
 	}()
-	f.step()
+	f.step(block)
 }
 
-// step reads what has been appended, says what goes wrong, and finishes the
-// run when it is complete.
-func (f *follower) step() {
+// step reads what has been appended, through block, says what goes wrong, and
+// finishes the run when it is complete.
+func (f *follower) step(block []byte) {
 	f.due = time.Now().Add(poll)
 	if f.final && !f.reachable() {
 		f.retry = time.Now().Add(retryLatest)
@@ -101,7 +106,7 @@ func (f *follower) step() {
 		f.refuse(told)
 		return
 	}
-	file, err := f.s.root.Open(f.path)
+	file, err := f.s.c.file(f.s.base, f.path)
 	if err != nil {
 		f.unreachable(err)
 		return
@@ -119,7 +124,7 @@ func (f *follower) step() {
 		}
 		f.begin()
 	}
-	if err := f.follow(file, info); err != nil {
+	if err := f.follow(file, info, block); err != nil {
 		f.unreachable(err)
 		return
 	}
@@ -133,7 +138,7 @@ func (f *follower) step() {
 
 // reachable tells whether a file that could not be read now can.
 func (f *follower) reachable() bool {
-	file, err := f.s.root.Open(f.path)
+	file, err := f.s.c.file(f.s.base, f.path)
 	if err != nil {
 		return false
 	}
@@ -143,8 +148,8 @@ func (f *follower) reachable() bool {
 
 // begin starts the analysis anew from the first byte.
 func (f *follower) begin() {
-	f.reading = pipeline.Open(f.path, f.s.c.Analysis)
-	f.started = true
+	f.reading = f.s.c.open(f.path, f.s.c.Analysis)
+	f.started, f.ending = true, false
 	f.offset, f.head, f.seam = 0, nil, nil
 	f.warned = qc.Tracker{}
 	f.grew = time.Now()
@@ -154,26 +159,33 @@ func (f *follower) begin() {
 }
 
 // follow feeds what has been appended since the last step.
-func (f *follower) follow(file *os.File, info fs.FileInfo) error {
+func (f *follower) follow(file *os.File, info fs.FileInfo, block []byte) error {
+	same := true
 	if info.Size() != f.size || !info.ModTime().Equal(f.modTime) {
 		f.size, f.modTime = info.Size(), info.ModTime()
 		f.grew = time.Now()
+		same = !f.ending
 	}
-	same, err := f.sameSoFar(file, info.Size())
-	if err != nil {
-		return err
+	if same {
+		var err error
+		if same, err = f.sameSoFar(file, info.Size()); err != nil {
+			return err
+		}
 	}
 	if !same {
 		f.begin()
 	}
-	block := make([]byte, readBytes)
 	for fed := 0; fed < stepBytes; {
 		n, err := file.ReadAt(block, f.offset)
-		f.reading.Feed(block[:n])
-		f.remember(block[:n])
-		f.offset += int64(n)
-		fed += n
-		if err == io.EOF {
+		take := n
+		if !f.ending {
+			take = written(block[:n])
+		}
+		f.reading.Feed(block[:take])
+		f.remember(block[:take])
+		f.offset += int64(take)
+		fed += take
+		if err == io.EOF || take < n {
 			return nil
 		}
 		if err != nil {
@@ -182,6 +194,15 @@ func (f *follower) follow(file *os.File, info fs.FileInfo) error {
 	}
 	f.due = time.Now() // there is more
 	return nil
+}
+
+// written returns how many bytes stand before room that may yet be written to.
+func written(p []byte) int {
+	n := len(bytes.TrimRight(p, "\x00"))
+	if len(p)-n < seamBytes {
+		return len(p)
+	}
+	return n
 }
 
 // sameSoFar tells whether the bytes already read are still those of the file:
@@ -221,7 +242,9 @@ func (f *follower) judge() {
 	}
 	f.judged = now
 	e := f.reading.Estimates()
-	for _, c := range f.warned.Update(qc.Judge(e, f.s.c.Limits)) {
+	findings := qc.Judge(e, f.s.c.Limits)
+	f.s.growing.note(Growing{File: f.path, Cell: e.Header.Cell, Bytes: f.offset, Samples: e.Samples, Findings: findings})
+	for _, c := range f.warned.Update(findings) {
 		if c.Raised {
 			f.s.c.Log.Warning(f.path, e.Header.Cell, c.Finding)
 		} else {
@@ -250,6 +273,11 @@ func (f *follower) finishWhenComplete(file *os.File) {
 		f.due = time.Now().Add(min(poll, wait-still))
 		return
 	}
+	if !f.ending && f.offset < f.size {
+		f.ending = true
+		f.due = time.Now()
+		return
+	}
 	print, err := fingerprint(file, f.offset)
 	if err != nil {
 		f.unreachable(err)
@@ -269,7 +297,9 @@ func (f *follower) conclude(e run.Estimates, id string) {
 	}}
 	f.final = true
 	f.started, f.old = false, false
-	f.reading = nil
+	// A folder may hold very many files that are over.
+	f.reading, f.head, f.seam, f.warned = nil, nil, nil, qc.Tracker{}
+	f.s.growing.forget(f.path)
 }
 
 // noID identifies a run of whose bytes nothing is known: by its name.
@@ -323,17 +353,22 @@ func (f *follower) unreachable(err error) {
 	since := now.Sub(f.failing)
 	f.due = now.Add(min(retryLatest, max(retryAfter, since/2)))
 	gone := errors.Is(err, fs.ErrNotExist)
+	patience := f.s.c.Settle
+	if errors.Is(err, errAway) {
+		patience = max(patience, awayMost) // the folder says itself that it is away
+	}
 	if gone && !f.started {
-		if since > f.s.c.Settle || f.known.Load() != nil {
+		if since > patience || f.known.Load() != nil {
 			f.final = true // it came and went before a byte was read, or had its result
 		}
 		return
 	}
-	if !f.said && !gone {
+	// A virus scanner or the instrument itself may hold it for a moment.
+	if !f.said && !gone && !errors.Is(err, errAway) && since >= retryAfter {
 		f.said = true
 		f.s.c.Log.FileTrouble(f.path, err)
 	}
-	if since < f.s.c.Settle {
+	if since < patience {
 		return
 	}
 	t := run.Trouble{Byte: f.offset, Want: "a file that can be read", Got: err.Error(), IsRun: f.started,

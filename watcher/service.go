@@ -17,10 +17,12 @@ package watcher
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"os"
 	"path/filepath"
 	"runtime"
+	"slices"
 	"strings"
 	"sync"
 	"sync/atomic"
@@ -64,21 +66,36 @@ type Config struct {
 	Exclude []string
 
 	Cells *Cells // makes the documents of cells; nil for none
+
+	// Tests put others in the place of these; nil means pipeline.Open and openBelow.
+	open func(name string, s pipeline.Settings) reading
+	file func(folder, path string) (*os.File, error)
+}
+
+// reading is what the service needs of pipeline.Reading, which has the
+// contract; tests put others in its place.
+type reading interface {
+	Feed([]byte)
+	Completion() run.Completion
+	Estimates() run.Estimates
+	Finish(run.Completion) (est run.Estimates, id string)
 }
 
 // Service follows one export folder.
 type Service struct {
 	c       Config
 	base    string // full path of the folder, with forward slashes
-	root    *os.Root
 	folder  *folder.Folder
 	known   map[string]store.Path
 	files   map[string]*follower
+	open    map[*follower]bool // those that are, or may become, due; the others wait to be told of
+	line    []*follower        // of those the ones that are due, the one to step next last
 	commits *committer
 	swept   bool
 	working int
 
 	untilIdle atomic.Bool
+	growing   growing
 }
 
 const (
@@ -106,7 +123,16 @@ func New(c Config) (*Service, error) {
 	if err := apart(base, c.Store.Folder()); err != nil {
 		return nil, err
 	}
-	return &Service{c: c, base: filepath.ToSlash(base), folder: f, files: map[string]*follower{}}, nil
+	if c.open == nil {
+		c.open = func(name string, s pipeline.Settings) reading { return pipeline.Open(name, s) }
+	}
+	if c.file == nil {
+		c.file = openBelow
+	}
+	return &Service{
+		c: c, base: filepath.ToSlash(base), folder: f,
+		files: map[string]*follower{}, open: map[*follower]bool{},
+	}, nil
 }
 
 // apart makes sure that nothing is ever written below the export folder.
@@ -144,10 +170,6 @@ func (s *Service) Run(ctx context.Context) error {
 	if err := s.announceLeft(); err != nil {
 		return err
 	}
-	if s.root, err = os.OpenRoot(filepath.FromSlash(s.base)); err != nil {
-		return fmt.Errorf("the export folder: %w", err)
-	}
-	defer func() { s.root.Close() }()
 	s.c.Log.Started(s.base, s.c.Store.Folder(), s.c.Software.Version)
 
 	var all sync.WaitGroup
@@ -167,8 +189,9 @@ func (s *Service) Run(ctx context.Context) error {
 	all.Go(func() { s.commits.run(commitCtx) })
 	for range runtime.GOMAXPROCS(0) {
 		all.Go(func() {
+			block := make([]byte, readBytes)
 			for f := range work {
-				f.safeStep()
+				f.safeStep(block)
 				done <- f
 			}
 		})
@@ -181,7 +204,7 @@ func (s *Service) Run(ctx context.Context) error {
 	close(work)
 	endCommits()
 	all.Wait()
-	s.c.Log.Stopped()
+	s.c.Log.Stopped(s.commits.waiting())
 	return nil
 }
 
@@ -222,6 +245,7 @@ func (s *Service) decide(ctx context.Context, batches <-chan folder.Batch, work 
 		case f := <-done:
 			s.stepped(f)
 		case <-tick.C:
+			s.lineUp()
 		}
 		s.keep(s.commits.reports())
 		if s.untilIdle.Load() && s.idle() {
@@ -242,6 +266,13 @@ func (s *Service) stepped(f *follower) {
 		f.again = false
 		f.wake(time.Now())
 	}
+	if f.final && f.retry.IsZero() {
+		delete(s.open, f)
+	}
+	if f.wants(time.Now()) {
+		i, _ := slices.BinarySearchFunc(s.line, f, byAge)
+		s.line = slices.Insert(s.line, i, f)
+	}
 }
 
 // wake has a file stepped again, whatever its state.
@@ -251,12 +282,12 @@ func (f *follower) wake(now time.Time) {
 		return
 	}
 	f.final, f.retry, f.due = false, time.Time{}, now
+	f.s.open[f] = true
 }
 
 // take notes what the folder tells.
 func (s *Service) take(b folder.Batch) {
 	s.swept = s.swept || b.Swept
-	s.reopen()
 	now := time.Now()
 	for _, file := range b.Files {
 		f := s.files[file.Path]
@@ -272,29 +303,30 @@ func (s *Service) take(b folder.Batch) {
 		if f := s.files[p]; f != nil {
 			if !f.busy && f.final {
 				delete(s.files, p)
+				delete(s.open, f)
 				continue
 			}
 			f.wake(now)
 		}
 	}
+	s.lineUp()
 }
 
-// reopen follows a folder that was removed and made anew.
-func (s *Service) reopen() {
-	path := filepath.FromSlash(s.base)
-	here, err := os.Stat(path)
+// errAway says that the export folder itself cannot be opened.
+var errAway = errors.New("the export folder is away")
+
+// openBelow opens a run file for reading. The folder is opened by its name each
+// time: so one that was unmounted, replaced or made anew is taken up again, and
+// nothing is held while nothing is read. os.Root also keeps to the folder
+// whatever links there are, and on Windows lets the instrument rename and
+// remove what is being read.
+func openBelow(folder, p string) (*os.File, error) {
+	root, err := os.OpenRoot(filepath.FromSlash(folder))
 	if err != nil {
-		return
+		return nil, fmt.Errorf("%w: %w", errAway, err)
 	}
-	if open, err := s.root.Stat("."); err == nil && os.SameFile(here, open) {
-		return
-	}
-	if root, err := os.OpenRoot(path); err == nil && s.working == 0 {
-		s.root.Close()
-		s.root = root
-	} else if err == nil {
-		root.Close() // a worker still reads through the old one; the next batch tries again
-	}
+	defer root.Close()
+	return root.Open(p)
 }
 
 func (s *Service) follow(file folder.File) *follower {
@@ -306,20 +338,29 @@ func (s *Service) follow(file folder.File) *follower {
 	return f
 }
 
-// next returns the file to step next: of those that are due, the one that
-// changed last, so that the operator's run is never behind a backlog.
-func (s *Service) next() *follower {
+// lineUp puts the files that are due in line: the one that changed last comes
+// first, so that the operator's run is never behind a backlog.
+func (s *Service) lineUp() {
 	now := time.Now()
-	var best *follower
-	for _, f := range s.files {
-		if f.busy || !f.wants(now) {
-			continue
-		}
-		if best == nil || f.newer(best) {
-			best = f
+	s.line = s.line[:0]
+	for f := range s.open {
+		if !f.busy && f.wants(now) {
+			s.line = append(s.line, f)
 		}
 	}
-	return best
+	slices.SortFunc(s.line, byAge)
+}
+
+// next returns the file to step next, nil where none is due.
+func (s *Service) next() *follower {
+	now := time.Now()
+	for n := len(s.line); n > 0; n-- {
+		if f := s.line[n-1]; !f.busy && s.open[f] && f.wants(now) {
+			return f
+		}
+		s.line = s.line[:n-1]
+	}
+	return nil
 }
 
 // wants tells whether a file is due to be stepped.
@@ -345,7 +386,7 @@ func (s *Service) idle() bool {
 	if !s.swept || s.working > 0 || s.commits.waiting() > 0 || s.c.Cells.waiting() {
 		return false
 	}
-	for _, f := range s.files {
+	for f := range s.open {
 		if !f.final {
 			return false
 		}

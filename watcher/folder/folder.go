@@ -5,15 +5,17 @@
 // what events lost (a queue that overflowed, a network share, too many
 // folders to watch), so no file is missed.
 //
-// Links are not followed: what they point at inside the folder is seen under
-// its own name, and what is outside does not belong to the session. Nothing is
-// ever written, opened or locked.
+// A link to a file inside the folder is that file under a second name. A link
+// to a folder is not gone into, since what it points at inside is seen under
+// its own name, so loops cannot be entered; what is outside does not belong to
+// the session. Nothing is ever written, and no file is opened or locked.
 package folder
 
 import (
 	"context"
 	"errors"
 	"io/fs"
+	"maps"
 	"os"
 	"path"
 	"path/filepath"
@@ -38,9 +40,9 @@ type Batch struct {
 	Swept bool     // the whole folder was looked through
 }
 
-// Options are the choices of New.
+// Options are the choices of New. Notice must be given.
 type Options struct {
-	Sweep   time.Duration // between two looks through the whole folder
+	Sweep   time.Duration // between two looks through the whole folder; 0 means two seconds
 	Include []string      // patterns of file names; see path.Match
 	Exclude []string
 	Notice  Notice
@@ -56,17 +58,17 @@ type Notice interface {
 
 // Folder follows one folder with its sub-folders.
 type Folder struct {
-	root string
-	o    Options
-
-	makeWatcher func() (*fsnotify.Watcher, error)
+	root   string
+	o      Options
+	list   func(dir string) ([]fs.DirEntry, error) // os.ReadDir, and
+	events func() (*fsnotify.Watcher, error)       // the system's, unless a test puts others in their place
 
 	watcher *fsnotify.Watcher // nil where the system gives no events
 	watched map[string]bool   // folders with a watch
 	silent  bool              // NoEvents has been said
 	rootIs  fs.FileInfo       // the folder that is being watched
 
-	files  map[string]seen
+	files  map[string]*seen
 	lost   map[string]bool // folders that could not be listed at the last sweep
 	sweeps int
 }
@@ -74,8 +76,10 @@ type Folder struct {
 // seen is the last known state of an entry.
 type seen struct {
 	File
-	changed time.Time // monotonic
-	sweep   int       // last sweep that saw it
+	mode    fs.FileMode // rights that are given back do not show in size and time
+	changed time.Time   // monotonic
+	sweep   int         // last sweep that saw it
+	anew    bool        // to be told again though nothing seems to have changed
 }
 
 const (
@@ -88,6 +92,8 @@ const (
 	// costs the reading of its names.
 	stillAfter    = time.Minute
 	thoroughEvery = 15
+
+	usualSweep = 2 * time.Second
 )
 
 // New prepares to follow the folder at root, which must exist.
@@ -99,12 +105,16 @@ func New(root string, o Options) (*Folder, error) {
 	if !info.IsDir() {
 		return nil, &fs.PathError{Op: "watch", Path: root, Err: errors.New("is not a folder")}
 	}
-	return &Folder{root: root, o: o, makeWatcher: newWatcher, rootIs: info, files: map[string]seen{}, lost: map[string]bool{}, watched: map[string]bool{}}, nil
+	if o.Sweep <= 0 {
+		o.Sweep = usualSweep
+	}
+	return &Folder{
+		root: filepath.Clean(root), o: o, rootIs: info,
+		list:   os.ReadDir,
+		events: func() (*fsnotify.Watcher, error) { return fsnotify.NewBufferedWatcher(4096) },
+		files:  map[string]*seen{}, lost: map[string]bool{}, watched: map[string]bool{},
+	}, nil
 }
-
-// newWatcher makes the system's file events. The buffer carries a burst while
-// the consumer is busy.
-func newWatcher() (*fsnotify.Watcher, error) { return fsnotify.NewBufferedWatcher(4096) }
 
 // Run follows the folder until ctx ends, and hands each batch over. The first
 // batch is a whole sweep.
@@ -135,7 +145,8 @@ func (f *Folder) Run(ctx context.Context, changed chan<- Batch) error {
 				f.watcher = nil
 				continue
 			}
-			touched := map[string]bool{ev.Name: true}
+			touched := map[string]bool{}
+			f.touch(ev, touched)
 			if f.drain(touched) {
 				b = f.sweep()
 			} else {
@@ -167,7 +178,7 @@ func (f *Folder) Run(ctx context.Context, changed chan<- Batch) error {
 
 // listen starts the file events, as far as the system gives any.
 func (f *Folder) listen() {
-	w, err := f.makeWatcher()
+	w, err := f.events()
 	if err != nil {
 		f.noEvents(f.root, err)
 		return
@@ -188,6 +199,36 @@ func (f *Folder) watch(dir string) {
 		return
 	}
 	f.watched[dir] = true
+}
+
+// touch notes the name of an event. A folder that was made, moved or removed
+// may be another one by now, of which the watch sees nothing.
+func (f *Folder) touch(ev fsnotify.Event, touched map[string]bool) {
+	touched[ev.Name] = true
+	if f.watched[ev.Name] && ev.Op&(fsnotify.Create|fsnotify.Remove|fsnotify.Rename) != 0 {
+		f.anew(ev.Name)
+	}
+}
+
+// anew has a folder, with all below it, watched again and its files told again:
+// what became of them while it was away cannot be known from size and time.
+func (f *Folder) anew(dir string) {
+	for d := range f.watched {
+		if within(d, dir) {
+			delete(f.watched, d)
+		}
+	}
+	for p, s := range f.files {
+		if within(filepath.Join(f.root, filepath.FromSlash(p)), dir) {
+			s.anew = true
+		}
+	}
+}
+
+// within tells whether a path is dir or lies below it.
+func within(p, dir string) bool {
+	rest, ok := strings.CutPrefix(p, dir)
+	return ok && (rest == "" || os.IsPathSeparator(rest[0]) || os.IsPathSeparator(dir[len(dir)-1]))
 }
 
 func (f *Folder) noEvents(dir string, err error) {
@@ -211,7 +252,7 @@ func (f *Folder) drain(touched map[string]bool) (sweep bool) {
 				f.watcher = nil
 				return true
 			}
-			touched[ev.Name] = true
+			f.touch(ev, touched)
 			pause.Reset(quiet)
 		case err, ok := <-f.watcher.Errors:
 			if !ok {
@@ -249,17 +290,12 @@ func (f *Folder) look(touched map[string]bool) Batch {
 			continue
 		}
 		rel, err := filepath.Rel(f.root, name)
-		if err != nil || rel == "." || strings.HasPrefix(rel, "..") {
+		if err != nil || rel == "." || hiddenPath(rel) { // ".." too
 			continue
 		}
 		info, err := os.Lstat(name)
 		if err != nil {
 			delete(f.watched, name)
-			// With its folder gone nothing is known of the file: the sweep
-			// tells a folder that was removed from one that is away.
-			if _, err := os.Lstat(filepath.Dir(name)); err != nil {
-				continue
-			}
 			if _, ok := f.files[filepath.ToSlash(rel)]; ok && errors.Is(err, fs.ErrNotExist) {
 				delete(f.files, filepath.ToSlash(rel))
 				b.Gone = append(b.Gone, filepath.ToSlash(rel))
@@ -267,7 +303,9 @@ func (f *Folder) look(touched map[string]bool) Batch {
 			continue
 		}
 		if info.IsDir() {
-			f.descend(rel, &b, map[string]bool{})
+			lost := map[string]bool{}
+			f.descend(rel, &b, lost)
+			maps.Copy(f.lost, lost) // said already; the sweep sees when they are back
 		}
 		f.consider(filepath.ToSlash(rel), info, &b)
 	}
@@ -284,9 +322,9 @@ func (f *Folder) sweep() Batch {
 		// The folder was removed and made anew, or another file system was
 		// mounted over it: the old watches see nothing of it.
 		f.rootIs = info
+		f.anew(f.root)
 		if f.watcher != nil {
 			f.watcher.Close()
-			f.watched = map[string]bool{}
 			f.listen()
 		}
 	}
@@ -298,7 +336,7 @@ func (f *Folder) sweep() Batch {
 	f.descend(".", &b, lost)
 	f.found(lost)
 	for p, s := range f.files {
-		if s.sweep != f.sweeps && !under(p, lost, f.root) {
+		if s.sweep != f.sweeps && !f.under(p, lost) {
 			delete(f.files, p)
 			b.Gone = append(b.Gone, p)
 		}
@@ -328,9 +366,10 @@ func (f *Folder) found(lost map[string]bool) {
 }
 
 // under tells whether a file lies in a folder that could not be listed.
-func under(p string, lost map[string]bool, root string) bool {
+func (f *Folder) under(p string, lost map[string]bool) bool {
+	full := filepath.Join(f.root, filepath.FromSlash(p))
 	for dir := range lost {
-		if rel, err := filepath.Rel(root, dir); err == nil && (rel == "." || strings.HasPrefix(p, filepath.ToSlash(rel)+"/")) {
+		if within(full, dir) {
 			return true
 		}
 	}
@@ -341,19 +380,26 @@ func under(p string, lost map[string]bool, root string) bool {
 func (f *Folder) descend(rel string, b *Batch, lost map[string]bool) {
 	dir := filepath.Join(f.root, filepath.FromSlash(rel))
 	f.watch(dir) // before listing: what is made in between is then seen twice, not never
-	entries, err := os.ReadDir(dir)
-	if err != nil && !errors.Is(err, fs.ErrNotExist) {
+	entries, err := f.list(dir)
+	switch {
+	case err == nil && f.lost[dir]:
+		f.anew(dir)
+		f.watch(dir)
+	case err != nil && !errors.Is(err, fs.ErrNotExist):
 		f.lose(dir, err, lost)
+	}
+	below := "" // path.Join would cost more than all the rest
+	if rel != "." {
+		below = filepath.ToSlash(rel) + "/"
 	}
 	thorough := f.sweeps%thoroughEvery == 1
 	for _, e := range entries {
-		p := path.Join(filepath.ToSlash(rel), e.Name())
+		p := below + e.Name()
 		if e.IsDir() && !hidden(e.Name()) {
 			f.descend(p, b, lost)
 		}
-		if s, ok := f.files[p]; ok && !thorough && e.Type().IsRegular() && s.Odd == "" && time.Since(s.changed) > stillAfter {
+		if s, ok := f.files[p]; ok && !thorough && e.Type().IsRegular() && s.Odd == "" && !s.anew && time.Since(s.changed) > stillAfter {
 			s.sweep = f.sweeps
-			f.files[p] = s
 			continue
 		}
 		if !f.wanted(e.Name()) {
@@ -368,6 +414,17 @@ func (f *Folder) descend(rel string, b *Batch, lost map[string]bool) {
 }
 
 func hidden(name string) bool { return strings.HasPrefix(name, ".") }
+
+// hiddenPath tells whether any part of a path is hidden: events name what the
+// sweep would not go into.
+func hiddenPath(rel string) bool {
+	for part := range strings.SplitSeq(filepath.ToSlash(rel), "/") {
+		if hidden(part) {
+			return true
+		}
+	}
+	return false
+}
 
 // wanted tells whether a name is that of a run.
 func (f *Folder) wanted(name string) bool {
@@ -392,18 +449,35 @@ func (f *Folder) consider(p string, info fs.FileInfo, b *Batch) {
 	if !f.wanted(path.Base(p)) {
 		return
 	}
+	if info.Mode()&fs.ModeSymlink != 0 {
+		info = f.pointedAt(p, info)
+	}
 	now := File{Path: p, Size: info.Size(), ModTime: info.ModTime(), Odd: odd(info.Mode())}
 	if now.Odd != "" {
 		now.Size, now.ModTime = 0, time.Time{}
 	}
 	s, known := f.files[p]
-	if known && s.Size == now.Size && s.ModTime.Equal(now.ModTime) && s.Odd == now.Odd {
+	if known && !s.anew && s.Size == now.Size && s.ModTime.Equal(now.ModTime) && s.mode == info.Mode() {
 		s.sweep = f.sweeps
-		f.files[p] = s
 		return
 	}
-	f.files[p] = seen{File: now, changed: time.Now(), sweep: f.sweeps}
+	f.files[p] = &seen{File: now, mode: info.Mode(), changed: time.Now(), sweep: f.sweeps}
 	b.Files = append(b.Files, now)
+}
+
+// pointedAt returns the file that a link points at inside the folder, or the
+// link itself where there is none: the rules are those of os.Root, through
+// which the file will be read (no link out of the folder, no absolute one).
+func (f *Folder) pointedAt(p string, link fs.FileInfo) fs.FileInfo {
+	root, err := os.OpenRoot(f.root)
+	if err != nil {
+		return link
+	}
+	defer root.Close()
+	if info, err := root.Stat(filepath.FromSlash(p)); err == nil && info.Mode().IsRegular() {
+		return info
+	}
+	return link
 }
 
 func odd(m fs.FileMode) string {

@@ -13,6 +13,7 @@ package sessionlog
 import (
 	"context"
 	"errors"
+	"fmt"
 	"io"
 	"log/slog"
 	"os"
@@ -43,10 +44,11 @@ type Log struct {
 	file   *file
 }
 
-// New opens the log. It fails only where its folder cannot be made.
+// New opens the log. It fails only without a console, which has to tell when
+// the file cannot be written.
 func New(o Options) (*Log, error) {
-	if err := os.MkdirAll(o.Folder, 0o700); err != nil {
-		return nil, err
+	if o.Console == nil {
+		return nil, errors.New("a session log needs a console")
 	}
 	f := &file{
 		w: &timberjack.Logger{
@@ -54,6 +56,9 @@ func New(o Options) (*Log, error) {
 			Compression: "gzip", LocalTime: false, FileMode: 0o600,
 		},
 		console: slog.New(words{o.Console}),
+	}
+	if err := os.MkdirAll(o.Folder, 0o700); err != nil {
+		f.note(err)
 	}
 	return &Log{
 		logger: slog.New(slog.NewMultiHandler(words{o.Console}, slog.NewJSONHandler(f, &slog.HandlerOptions{Level: slog.LevelDebug}))),
@@ -78,6 +83,11 @@ type file struct {
 
 func (f *file) Write(p []byte) (int, error) {
 	n, err := f.w.Write(p)
+	f.note(err)
+	return n, err
+}
+
+func (f *file) note(err error) {
 	f.mu.Lock()
 	defer f.mu.Unlock()
 	switch {
@@ -88,7 +98,6 @@ func (f *file) Write(p []byte) (int, error) {
 		f.broken = false
 		f.console.Info("The session log can be written again.")
 	}
-	return n, err
 }
 
 // words passes only the words of an event on, not its attributes.
@@ -129,8 +138,20 @@ func (l *Log) Started(folder, state, version string) {
 		slog.String("folder", folder), slog.String("state", state), slog.String("version", version))
 }
 
-// Stopped says that the service has ended in order.
-func (l *Log) Stopped() { l.say(slog.LevelInfo, EventStopped, "Stopped; everything so far is stored.") }
+// Stopped says that the service has ended in order, and how many results it
+// could not store.
+func (l *Log) Stopped(unstored int) {
+	if unstored == 0 {
+		l.say(slog.LevelInfo, EventStopped, "Stopped; everything so far is stored.")
+		return
+	}
+	results := "results"
+	if unstored == 1 {
+		results = "result"
+	}
+	l.say(slog.LevelWarn, EventStopped, fmt.Sprintf("Stopped; %d %s could not be stored and will be made again from the files at the next start.", unstored, results),
+		slog.Int("unstored", unstored))
+}
 
 // RunSeen says that a run file is being read.
 func (l *Log) RunSeen(file string) {
@@ -182,8 +203,16 @@ func (l *Log) Verdict(r run.Result, revision int, supersedes string) {
 	if s := plain.Headline(r); s != nil {
 		attrs = append(attrs, slog.Any("segment", s))
 	}
-	l.say(level, EventVerdict, text, append(attrs, slog.Any("findings", r.Findings))...)
+	findings := r.Findings[:min(mostFindings, len(r.Findings))] // worst first
+	if left := len(r.Findings) - len(findings); left > 0 {
+		attrs = append(attrs, slog.Int("findings_left_out", left))
+	}
+	l.say(level, EventVerdict, text, append(attrs, slog.Any("findings", findings))...)
 }
+
+// mostFindings keeps the record of a verdict far below the size of a part of
+// the log, beyond which it would be refused; the store has all findings.
+const mostFindings = 100
 
 // Cell says what the runs of a cell tell together and what further run would
 // help. A cell with one oscillation is told to the file only: many labs take
