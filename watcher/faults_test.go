@@ -101,6 +101,37 @@ type feedHook struct {
 
 func (h feedHook) Feed(p []byte) { h.fed(p); h.reading.Feed(p) }
 
+// Bytes in the middle are written over in place before the run has settled: the
+// result is that of what the file holds in the end.
+func TestWrittenInPlace(t *testing.T) {
+	r := newRig(t, "", func(c *Config) { c.Settle = 2 * time.Second })
+	b := export(t, 0, phantom.Silent)
+	r.write("a.tsv", b)
+	r.until("it to be read", func() bool { return r.said("Reading a.tsv") == 1 })
+	time.Sleep(400 * time.Millisecond) // so that all of it has been read
+	at := bytes.LastIndexByte(b[:len(b)/2], '\n') + 1
+	row := bytes.Clone(b[at : at+bytes.IndexByte(b[at:], '\n')])
+	i := bytes.IndexByte(row, '\t') + 1
+	row[i] = '9' // another force
+	if row[i] == b[at+i] {
+		row[i] = '8'
+	}
+	want := bytes.Clone(b)
+	copy(want[at:], row)
+	f, err := os.OpenFile(filepath.Join(r.export, "a.tsv"), os.O_WRONLY, 0)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer f.Close()
+	if _, err := f.WriteAt(row, int64(at)); err != nil {
+		t.Fatal(err)
+	}
+	r.until("a result", func() bool { _, ok := r.of("a.tsv"); return ok })
+	if got, _ := r.of("a.tsv"); asText(t, got) != undisturbed("a.tsv", want) {
+		t.Errorf("%.400s\nwant\n%.400s", asText(t, got), undisturbed("a.tsv", want))
+	}
+}
+
 // A folder that is away for a while, as a share that drops, and back with the
 // very same files: what was being read is read to its end.
 func TestFolderBackWithTheSameFiles(t *testing.T) {

@@ -162,9 +162,12 @@ func (f *follower) begin() {
 func (f *follower) follow(file *os.File, info fs.FileInfo, block []byte) error {
 	same := true
 	if info.Size() != f.size || !info.ModTime().Equal(f.modTime) {
+		// All of it had been read, nothing was appended, and yet it changed:
+		// something was written in place.
+		inPlace := info.Size() == f.size && f.offset == f.size && f.offset > 0
 		f.size, f.modTime = info.Size(), info.ModTime()
 		f.grew = time.Now()
-		same = !f.ending
+		same = !f.ending && !inPlace
 	}
 	if same {
 		var err error
@@ -186,6 +189,7 @@ func (f *follower) follow(file *os.File, info fs.FileInfo, block []byte) error {
 		f.offset += int64(take)
 		fed += take
 		if err == io.EOF || take < n {
+			f.readAll(file)
 			return nil
 		}
 		if err != nil {
@@ -194,6 +198,16 @@ func (f *follower) follow(file *os.File, info fs.FileInfo, block []byte) error {
 	}
 	f.due = time.Now() // there is more
 	return nil
+}
+
+// readAll notes the state of a file that has been read to its end: rows that
+// came between looking at it and reading it must not pass for a change in
+// place later.
+func (f *follower) readAll(file *os.File) {
+	if info, err := file.Stat(); err == nil && info.Size() == f.offset && info.Size() != f.size {
+		f.size, f.modTime = info.Size(), info.ModTime()
+		f.grew = time.Now()
+	}
 }
 
 // written returns how many bytes stand before room that may yet be written to.
