@@ -323,13 +323,13 @@ func (t *Tables) frequencies(c *run.CellResult, ps []piece, s Settings) {
 			if k.P < inconsistent {
 				c.Findings = append(c.Findings, run.Finding{Rule: "kramers-kronig", Severity: run.ToReview,
 					Value: run.Number(k.P), Limit: run.Number(inconsistent), Unit: "1",
-					Message: fmt.Sprintf("At %.2f of the diameter storage and loss modulus do not belong together (p = %.2g): no linear material answers so.", f.HeightRatio, k.P),
+					Message: fmt.Sprintf("At %.2f of the diameter storage and loss modulus do not belong together (p = %.2g): no passive, relaxing material answers so.", f.HeightRatio, k.P),
 					Advice:  "Check the lag between force and height and the drag of the medium, and whether the cell changed between the runs."})
 			}
 		}
 		// The crossover is read where most frequencies were measured.
 		if len(series) > most {
-			if x, err := visco.Crossover(series, r.Fits[0], s.Bootstrap, 2); err == nil {
+			if x, err := r.Crossover(series, s.Bootstrap, 2); err == nil {
 				most = len(series)
 				c.Crossover = crossover(x, r.Fits[0].Model.Name)
 			}

@@ -1,17 +1,25 @@
 package visco
 
 import (
+	"cmp"
 	"errors"
+	"fmt"
 	"math"
+	"slices"
 )
 
-// Law is a law of decay with what was fitted.
+// Law is a law of decay with what was fitted. Standard uncertainties are NaN
+// where the data do not tell.
 type Law struct {
 	Name      string // "exponential", "stretched exponential" or "power law"
 	Plateau   float64
 	Drop      float64 // above the plateau at t = 0
 	TimeS     float64
 	Exponent  float64 // 1 for the exponential
+	UPlateau  float64
+	UDrop     float64
+	UTimeS    float64
+	UExponent float64 // 0 for the exponential
 	AICc      float64
 	remaining func(t float64) float64
 }
@@ -19,87 +27,146 @@ type Law struct {
 // At returns the fitted value at time t in s after the start.
 func (l Law) At(t float64) float64 { return l.Plateau + l.Drop*l.remaining(t) }
 
-// Decay fits three laws to a quantity that decays after a step, t in s after
-// it, best first by AICc:
+// Decay is FitDecay without weights.
+func Decay(t, y []float64) ([]Law, error) { return FitDecay(t, y, nil) }
+
+// law is a law of decay that FitDecay tries.
+type law struct {
+	name      string
+	stretches bool                       // has an exponent of its own
+	shape     func(x, b float64) float64 // x = t/T
+}
+
+var laws = []law{
+	{"exponential", false, func(x, _ float64) float64 { return math.Exp(-x) }},
+	{"stretched exponential", true, func(x, b float64) float64 { return math.Exp(-math.Pow(x, b)) }},
+	{"power law", true, func(x, b float64) float64 { return math.Pow(1+x, -b) }},
+}
+
+// fewestValues of a decay leave seven degrees of freedom to the largest law.
+const fewestValues = 12
+
+// FitDecay fits three laws to a quantity that decays after a step, t in s after
+// it, ascending, best first by AICc:
 //
-//	y0 + d exp(-t/T),  y0 + d exp(-(t/T)^b) (Kohlrausch),  y0 + d (1 + t/T)^-b.
+//	y0 + d exp(-t/T),  y0 + d exp(-(t/T)^b) (Kohlrausch),  y0 + d (1 + t/T)^-b,  0 < b < 1.5.
 //
-// The scatter about the law is its own weight; values are means of like numbers
-// of samples. It needs twelve values.
-func Decay(t, y []float64) ([]Law, error) {
+// w holds weights, in proportion to 1/u^2 of the values; nil for equal ones.
+// Only their ratios count: the scatter about the law sets the scale of the
+// uncertainties, because the noise of a tension is not white and its own
+// uncertainty rarely known. Noise that lasts from one value to the next still
+// makes uncertainties too small; take means over stretches longer than it
+// lasts. It needs twelve values; a law whose time lies beyond ten times the
+// record, or below a tenth of its first interval, is a straight line or a step
+// in disguise and is not returned.
+func FitDecay(t, y, w []float64) ([]Law, error) {
 	n := len(y)
-	if n < 12 || len(t) != n {
-		return nil, errors.New("visco: a decay needs at least twelve values")
+	switch {
+	case len(t) != n || w != nil && len(w) != n:
+		return nil, fmt.Errorf("visco: %d times and %d weights for %d values of a decay", len(t), len(w), n)
+	case n < fewestValues:
+		return nil, fmt.Errorf("visco: a decay needs at least twelve values, not %d", n)
+	case !finite(t) || !finite(y) || !finite(w):
+		return nil, errors.New("visco: a value of the decay is not finite")
+	case t[0] < 0 || !slices.IsSorted(t) || t[0] == t[n-1]:
+		return nil, errors.New("visco: the times of a decay must ascend from the step")
 	}
-	span := t[n-1]
-	if !(span > 0) {
-		return nil, errors.New("visco: a decay needs a stretch of time")
-	}
-	scale := 0.0
-	for _, v := range y {
+	scale, all := 0.0, 0.0
+	for i, v := range y {
 		scale = math.Max(scale, math.Abs(v))
+		if w != nil {
+			if !(w[i] > 0) {
+				return nil, fmt.Errorf("visco: weight %g of value %d is not positive", w[i], i)
+			}
+			all += w[i]
+		}
 	}
 	if scale == 0 {
 		return nil, errors.New("visco: all values are zero")
 	}
-	kinds := []struct {
-		name  string
-		extra bool
-		shape func(x, b float64) float64 // x = t/T
-	}{
-		{"exponential", false, func(x, _ float64) float64 { return math.Exp(-x) }},
-		{"stretched exponential", true, func(x, b float64) float64 { return math.Exp(-math.Pow(x, b)) }},
-		{"power law", true, func(x, b float64) float64 { return math.Pow(1+x, -b) }},
+	root := make([]float64, n)
+	for i := range root {
+		root[i] = 1
+		if w != nil {
+			root[i] = math.Sqrt(w[i] / all * float64(n))
+		}
 	}
 	var out []Law
-	for _, kind := range kinds {
-		var best *Minimum
-		for _, t0 := range []float64{span / 30, span / 6, span} {
-			start := []float64{y[n-1] / scale, (y[0] - y[n-1]) / scale, math.Log(t0)}
-			if start[1] == 0 {
-				start[1] = 1e-3
-			}
-			if kind.extra {
-				start = append(start, 0) // exponent 1/(1+e^-0) = 1/2, times 1.5
-			}
-			m, err := leastSquares(n, func(p, r []float64) bool {
-				b := exponent(p)
-				for i := range y {
-					r[i] = p[0] + p[1]*kind.shape(t[i]/math.Exp(p[2]), b) - y[i]/scale
-				}
-				return true
-			}, start, fewIterations)
-			// A time far beyond the record, or far below its first value, is a
-			// straight line in disguise: not a decay that the data show.
-			if err == nil && math.Exp(m.P[2]) < 10*span && (best == nil || m.RSS < best.RSS) {
-				best = &m
-			}
+	for _, kind := range laws {
+		if l, ok := kind.fit(t, y, root, scale); ok {
+			out = append(out, l)
 		}
-		if best == nil || best.RSS == 0 {
-			continue
-		}
-		k := float64(len(best.P)) + 1 // and the scatter
-		l := Law{Name: kind.name, Plateau: best.P[0] * scale, Drop: best.P[1] * scale, TimeS: math.Exp(best.P[2]), Exponent: exponent(best.P)}
-		l.AICc = float64(n)*math.Log(best.RSS/float64(n)) + 2*k + 2*k*(k+1)/(float64(n)-k-1)
-		l.remaining = func(t float64) float64 { return kind.shape(t/l.TimeS, l.Exponent) }
-		i := 0
-		for i < len(out) && out[i].AICc <= l.AICc {
-			i++
-		}
-		out = append(out[:i], append([]Law{l}, out[i:]...)...)
 	}
 	if len(out) == 0 {
 		return nil, errors.New("visco: no law of decay describes the values")
 	}
+	slices.SortStableFunc(out, func(a, b Law) int { return cmp.Compare(a.AICc, b.AICc) })
 	return out, nil
 }
 
-// exponent keeps exponents between 0 and 1.5.
-func exponent(p []float64) float64 {
-	if len(p) < 4 {
-		return 1
+// fit fits one law; y is scaled to 1, the time is a logarithm.
+func (kind law) fit(t, y, root []float64, scale float64) (Law, bool) {
+	n := len(y)
+	span := t[n-1]
+	exponent := func(p []float64) float64 {
+		if !kind.stretches {
+			return 1
+		}
+		return 1.5 / (1 + math.Exp(-p[3]))
 	}
-	return 1.5 / (1 + math.Exp(-p[3]))
+	shortest, longest := math.Log((t[1]-t[0])/10), math.Log(10*span)
+	if t[1] == t[0] {
+		shortest = math.Log(span / float64(n) / 10)
+	}
+	big := math.Inf(1)
+	np := 3
+	if kind.stretches {
+		np = 4
+	}
+	pr := problem{
+		n: n,
+		f: func(p, r []float64) bool {
+			b, time := exponent(p), math.Exp(p[2])
+			for i := range y {
+				r[i] = root[i] * (p[0] + p[1]*kind.shape(t[i]/time, b) - y[i]/scale)
+			}
+			return true
+		},
+		most:  500,
+		lower: []float64{-big, -big, shortest, -farLogit}[:np],
+		upper: []float64{big, big, longest, farLogit}[:np],
+		reach: 2, h: 1e-5, offset: 1e-6, flat: 1e-7,
+	}
+	var best *search
+	for _, t0 := range []float64{span / 100, span / 30, span / 6, span} {
+		start := []float64{y[n-1] / scale, (y[0] - y[n-1]) / scale, math.Max(shortest, math.Log(t0)), 0}[:np]
+		if start[1] == 0 {
+			start[1] = 1e-3
+		}
+		x := newSearch(pr, start)
+		if err := x.descend(); err == nil && (best == nil || x.rss < best.rss) {
+			best = x
+		}
+	}
+	if best == nil || best.rss == 0 || best.p[2] <= shortest || best.p[2] >= longest {
+		return Law{}, false
+	}
+	k := float64(np) + 1 // and the scatter
+	l := Law{Name: kind.name, Plateau: best.p[0] * scale, Drop: best.p[1] * scale, TimeS: math.Exp(best.p[2]), Exponent: exponent(best.p)}
+	l.AICc = float64(n)*math.Log(best.rss/float64(n)) + 2*k + 2*k*(k+1)/(float64(n)-k-1)
+	l.remaining = func(t float64) float64 { return kind.shape(t/l.TimeS, l.Exponent) }
+	cov, ok := best.covariance()
+	u := func(i int, slope float64) float64 {
+		if !ok {
+			return math.NaN()
+		}
+		return slope * math.Sqrt(cov.At(i, i)*best.rss/float64(n-np))
+	}
+	l.UPlateau, l.UDrop, l.UTimeS = u(0, scale), u(1, scale), u(2, l.TimeS)
+	if kind.stretches {
+		l.UExponent = u(3, l.Exponent*(1-l.Exponent/1.5))
+	}
+	return l, true
 }
 
 // Settled tells whether a decay has come to rest by time t: going on for as

@@ -22,33 +22,52 @@ type Model struct {
 type ParameterName struct {
 	Name, Unit string
 	Share      bool
+	// exceeds is 1 + the index of a parameter that this one is always above, 0
+	// where there is none.
+	exceeds int
 }
 
-// Models returns the models that Rank fits by default. Formulas of the first
-// three and of the box spectrum after Ferry, Viscoelastic Properties of
-// Polymers (1980), of the fractional ones after Schiessel, Metzler, Blumen and
-// Nonnenmacher (J. Phys. A 28, 1995); all from memory, checked in the tests
-// against values computed elsewhere.
+// Models returns the models that Rank fits by default:
+//
+//	Maxwell              E i w tau/(1 + i w tau)
+//	Kelvin-Voigt         E + i w eta
+//	Zener                Einf + E1 i w tau/(1 + i w tau)
+//	power law            A (i w/w0)^alpha, w0 = 2 pi 1 Hz
+//	fractional Maxwell   E (i w tau)^alpha/(1 + (i w tau)^alpha)
+//	flat spectrum        (H/2) ln[(1 + w^2 T^2)/(1 + w^2 t^2)] + i H [atan wT - atan wt]
+//
+// Formulas of the first three and of the flat (box) spectrum after Ferry,
+// Viscoelastic Properties of Polymers (1980), of the fractional ones after
+// Schiessel, Metzler, Blumen and Nonnenmacher (J. Phys. A 28, 1995); all from
+// memory, checked in the tests against values computed elsewhere.
 func Models() []Model { return models }
+
+// WiderModels returns models of four parameters, two springpots in series and
+// side by side (Schiessel et al. 1995). They need three frequencies to be
+// fitted at all and many more to be told from the simpler ones, which is why
+// Rank leaves them out unless asked.
+//
+//	fractional Maxwell, two springpots        K1 K2/(K1 + K2),  K = A (i w/w0)^alpha
+//	fractional Kelvin-Voigt, two springpots   K1 + K2
+func WiderModels() []Model { return widerModels }
 
 // The tables of this package never change.
 var models = []Model{
 	{
-		// A spring in series with a dashpot: K* = E i w t/(1 + i w t).
+		// A spring in series with a dashpot: a liquid of viscosity E tau at low
+		// frequencies, a solid E at high ones; K' = K” at w = 1/tau.
 		Name:       "Maxwell",
-		Parameters: []ParameterName{{"E", "N/m", false}, {"tau", "s", false}},
-		Modulus: func(w float64, p []float64) complex128 {
-			x := complex(0, w*p[1])
-			return complex(p[0], 0) * x / (1 + x)
-		},
+		Parameters: []ParameterName{{Name: "E", Unit: "N/m"}, {Name: "tau", Unit: "s"}},
+		Modulus:    func(w float64, p []float64) complex128 { return element(p[0], w*p[1]) },
 		starts: func(s []Point) [][]float64 {
 			return grid([]float64{strongest(s)}, times(s))
 		},
 	},
 	{
-		// A spring beside a dashpot: K* = E + i w eta.
+		// A spring beside a dashpot: a solid E at low frequencies, a viscosity
+		// eta at high ones; K' = K” at w = E/eta.
 		Name:       "Kelvin-Voigt",
-		Parameters: []ParameterName{{"E", "N/m", false}, {"eta", "N s/m", false}},
+		Parameters: []ParameterName{{Name: "E", Unit: "N/m"}, {Name: "eta", Unit: "N s/m"}},
 		Modulus:    func(w float64, p []float64) complex128 { return complex(p[0], w*p[1]) },
 		starts: func(s []Point) [][]float64 {
 			k := strongest(s)
@@ -60,12 +79,12 @@ var models = []Model{
 		},
 	},
 	{
-		// The standard linear solid (Zener): K* = Einf + E1 i w t/(1 + i w t).
+		// The standard linear solid, a spring beside a Maxwell element: Einf at
+		// low frequencies, Einf + E1 at high ones; K” peaks at E1/2, w = 1/tau.
 		Name:       "Zener",
-		Parameters: []ParameterName{{"Einf", "N/m", false}, {"E1", "N/m", false}, {"tau", "s", false}},
+		Parameters: []ParameterName{{Name: "Einf", Unit: "N/m"}, {Name: "E1", Unit: "N/m"}, {Name: "tau", Unit: "s"}},
 		Modulus: func(w float64, p []float64) complex128 {
-			x := complex(0, w*p[2])
-			return complex(p[0], 0) + complex(p[1], 0)*x/(1+x)
+			return complex(p[0], 0) + element(p[1], w*p[2])
 		},
 		starts: func(s []Point) [][]float64 {
 			k := strongest(s)
@@ -77,21 +96,22 @@ var models = []Model{
 		},
 	},
 	{
-		// A springpot: K* = A (i w/w0)^a with w0 = 2 pi 1 Hz, so that A is the
-		// absolute modulus at 1 Hz.
+		// A springpot; A is the absolute modulus at 1 Hz, the loss tangent
+		// tan(pi alpha/2) at every frequency.
 		Name:       "power law",
-		Parameters: []ParameterName{{"A", "N/m", false}, {"alpha", "1", true}},
+		Parameters: []ParameterName{{Name: "A", Unit: "N/m"}, {Name: "alpha", Unit: "1", Share: true}},
 		Modulus: func(w float64, p []float64) complex128 {
-			return complex(p[0], 0) * power(w/(2*math.Pi), p[1])
+			return springpot(w, p[0], p[1])
 		},
 		starts: func(s []Point) [][]float64 {
 			return grid([]float64{strongest(s)}, []float64{0.05, 0.2, 0.5, 0.8})
 		},
 	},
 	{
-		// A spring in series with a springpot: K* = E (i w t)^a/(1 + (i w t)^a).
+		// A spring in series with a springpot: a power law at low frequencies,
+		// a solid E at high ones; Maxwell's model where alpha = 1.
 		Name:       "fractional Maxwell",
-		Parameters: []ParameterName{{"E", "N/m", false}, {"tau", "s", false}, {"alpha", "1", true}},
+		Parameters: []ParameterName{{Name: "E", Unit: "N/m"}, {Name: "tau", Unit: "s"}, {Name: "alpha", Unit: "1", Share: true}},
 		Modulus: func(w float64, p []float64) complex128 {
 			x := power(w*p[1], p[2])
 			return complex(p[0], 0) * x / (1 + x)
@@ -105,20 +125,66 @@ var models = []Model{
 		},
 	},
 	{
-		// A flat spectrum of relaxation times from t1 up to the longest, t1 + t2:
-		// K' = (H/2) ln[(1+w^2 T^2)/(1+w^2 t1^2)], K'' = H [atan wT - atan w t1].
+		// Relaxation times spread evenly over ln t, with weight H, from the
+		// shortest t to the longest T: a liquid of viscosity H (T - t) at low
+		// frequencies, a solid H ln(T/t) at high ones, K” near pi H/2 between.
 		Name:       "flat spectrum",
-		Parameters: []ParameterName{{"H", "N/m", false}, {"shortest", "s", false}, {"longest less shortest", "s", false}},
+		Parameters: []ParameterName{{Name: "H", Unit: "N/m"}, {Name: "shortest", Unit: "s"}, {Name: "longest", Unit: "s", exceeds: 2}},
 		Modulus: func(w float64, p []float64) complex128 {
-			a, b := w*p[1], w*(p[1]+p[2])
+			a, b := w*p[1], w*p[2]
 			return complex(p[0]/2*(math.Log1p(b*b)-math.Log1p(a*a)), p[0]*(math.Atan(b)-math.Atan(a)))
 		},
 		starts: func(s []Point) [][]float64 {
 			k := strongest(s)
 			lo, hi := 1/(2*math.Pi*s[len(s)-1].FrequencyHz), 1/(2*math.Pi*s[0].FrequencyHz)
-			return [][]float64{{k / 3, lo, hi}, {k / 5, lo / 10, 10 * hi}, {k / 2, lo / 100, hi / 3}, {k / 8, lo / 100, 100 * hi}}
+			return [][]float64{{k / 3, lo, lo + hi}, {k / 5, lo / 10, 10 * hi}, {k / 2, lo / 100, hi / 3}, {k / 8, lo / 100, 100 * hi}}
 		},
 	},
+}
+
+var widerModels = []Model{
+	{
+		Name:       "fractional Maxwell, two springpots",
+		Parameters: twoSpringpots,
+		Modulus: func(w float64, p []float64) complex128 {
+			a, b := springpot(w, p[0], p[1]), springpot(w, p[2], p[3])
+			return a * b / (a + b)
+		},
+		starts: startTwo,
+	},
+	{
+		Name:       "fractional Kelvin-Voigt, two springpots",
+		Parameters: twoSpringpots,
+		Modulus: func(w float64, p []float64) complex128 {
+			return springpot(w, p[0], p[1]) + springpot(w, p[2], p[3])
+		},
+		starts: startTwo,
+	},
+}
+
+var twoSpringpots = []ParameterName{
+	{Name: "A1", Unit: "N/m"}, {Name: "alpha1", Unit: "1", Share: true},
+	{Name: "A2", Unit: "N/m"}, {Name: "alpha2", Unit: "1", Share: true},
+}
+
+func startTwo(s []Point) [][]float64 {
+	k := strongest(s)
+	var out [][]float64
+	for _, g := range grid([]float64{k / 10, k, 10 * k}, []float64{k / 10, k, 10 * k}) {
+		out = append(out, []float64{g[0], 0.8, g[1], 0.1}, []float64{g[0], 0.5, g[1], 0.3})
+	}
+	return out
+}
+
+// element is a Maxwell element of modulus e at x = w tau.
+func element(e, x float64) complex128 {
+	y := 1 + x*x
+	return complex(e*x*x/y, e*x/y)
+}
+
+// springpot is A (i w/w0)^alpha.
+func springpot(w, a, alpha float64) complex128 {
+	return complex(a, 0) * power(w/(2*math.Pi), alpha)
 }
 
 // power is (i x)^a for x >= 0.

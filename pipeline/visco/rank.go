@@ -6,10 +6,7 @@ import (
 	"fmt"
 	"math"
 	"math/cmplx"
-	"math/rand/v2"
 	"slices"
-
-	"gonum.org/v1/gonum/stat/distuv"
 )
 
 // Point is the complex modulus at one frequency with the standard
@@ -29,11 +26,23 @@ type Fitted struct {
 	Freedom       int
 	AICc          float64
 	EvidenceRatio float64 // of the best model over this one
+	Weight        float64 // Akaike weight: this one's share of the evidence of all
 }
 
 // Modulus returns the fitted K* at a frequency.
 func (f Fitted) Modulus(frequencyHz float64) complex128 {
 	return f.Model.Modulus(2*math.Pi*frequencyHz, f.P)
+}
+
+// widen is what the uncertainties of the points are multiplied by where the
+// fit is worse than they allow: a misfit means that they were too small, or the
+// model too simple. A fit that is better than they allow earns nothing, since
+// with few points that is luck.
+func (f Fitted) widen() float64 {
+	if f.Freedom < 1 {
+		return 1
+	}
+	return math.Sqrt(math.Max(1, f.ChiSquared/float64(f.Freedom)))
 }
 
 // Ranking holds the fitted models, best first.
@@ -56,8 +65,9 @@ const decisive = 10
 //
 // A model with too many parameters for the series is left out and says so.
 // Standard uncertainties are those of the weights, times sqrt(chi^2/freedom)
-// where that is above 1: a misfit means that the weights were too small, or the
-// model too simple.
+// where that is above 1; a parameter that the data do not tell, because it lies
+// beyond every frequency or its uncertainty is a factor of twenty and more, has
+// NaN.
 func Rank(series []Point, ms ...Model) (Ranking, error) {
 	s, err := sorted(series)
 	if err != nil {
@@ -86,8 +96,13 @@ func Rank(series []Point, ms ...Model) (Ranking, error) {
 		return r, fmt.Errorf("visco: no model fits %d frequencies", len(s))
 	}
 	slices.SortStableFunc(r.Fits, func(a, b Fitted) int { return cmp.Compare(a.AICc, b.AICc) })
+	all := 0.0
 	for i := range r.Fits {
 		r.Fits[i].EvidenceRatio = math.Exp(math.Min(700, (r.Fits[i].AICc-r.Fits[0].AICc)/2))
+		all += 1 / r.Fits[i].EvidenceRatio
+	}
+	for i := range r.Fits {
+		r.Fits[i].Weight = 1 / r.Fits[i].EvidenceRatio / all
 	}
 	r.Decided = len(r.Fits) == 1 || r.Fits[1].EvidenceRatio >= decisive
 	return r, nil
@@ -109,275 +124,151 @@ func sorted(series []Point) ([]Point, error) {
 	if s[0].FrequencyHz == s[len(s)-1].FrequencyHz {
 		return nil, errors.New("visco: a series needs at least two different frequencies")
 	}
+	if strongest(s) == 0 {
+		return nil, errors.New("visco: the modulus is zero at all frequencies")
+	}
 	return s, nil
 }
 
-// fewIterations is enough for a series that determines its model; where it is
-// not, parameters run away, and following them is of no use.
-const fewIterations = 200
-
 // fit finds the best of the minima reached from several starts.
 func fit(s []Point, m Model, starts [][]float64) (Fitted, error) {
-	residuals := func(q, r []float64) bool {
-		p := outward(m, q)
-		for i, x := range s {
-			d := m.Modulus(2*math.Pi*x.FrequencyHz, p) - x.K
-			r[2*i], r[2*i+1] = real(d)/x.UStorage, imag(d)/x.ULoss
-		}
-		return true
+	best := lowest(s, m, starts)
+	if best == nil {
+		return Fitted{}, ErrNoMinimum
 	}
-	best := Minimum{RSS: math.Inf(1)}
-	for _, start := range starts {
-		min, err := leastSquares(2*len(s), residuals, inward(m, start), fewIterations)
-		if err == nil && min.RSS < best.RSS {
-			best = min
-		}
-	}
-	if best.P == nil {
-		return Fitted{}, errors.New("the data do not determine its parameters")
-	}
-	f := Fitted{Model: m, P: outward(m, best.P), ChiSquared: best.RSS, Freedom: 2*len(s) - len(best.P)}
-	widen := math.Sqrt(math.Max(1, f.ChiSquared/float64(f.Freedom)))
+	f := Fitted{Model: m, P: outward(m, best.p, nil), ChiSquared: best.rss, Freedom: 2*len(s) - len(best.p)}
+	cov, _ := best.covariance() // what it does not tell is untold
+	widen := f.widen()
+	slopes := make([]float64, len(f.P))
 	for i := range f.P {
-		slope := f.P[i] // dp/dq of a logarithm
-		if m.Parameters[i].Share {
-			slope = f.P[i] * (1 - f.P[i])
+		u := math.NaN()
+		if own := widen * math.Sqrt(cov.At(i, i)); own < untold {
+			slopesAt(m, f.P, i, slopes)
+			v := 0.0
+			for a, x := range slopes {
+				for b, y := range slopes {
+					// A parameter without influence has no covariance.
+					if c := cov.At(a, b); x != 0 && y != 0 && !math.IsNaN(c) {
+						v += x * c * y
+					}
+				}
+			}
+			u = widen * math.Sqrt(v)
 		}
-		f.U = append(f.U, widen*slope*math.Sqrt(best.Covariance.At(i, i)))
+		f.U = append(f.U, u)
 	}
 	return f, nil
 }
 
-// inward maps parameters to the unbounded variables of the solver.
+// untold is the uncertainty of a logarithm, a factor of twenty, from which on a
+// parameter counts as not told by the data.
+const untold = 3.0
+
+// How far parameters may run: a modulus this factor above and below the
+// strongest one, a time this factor beyond the measured 1/w, a logit so far
+// from a half. There they stand for "zero" or "infinite": the modulus at the
+// measured frequencies no longer feels them, to better than any measurement.
+const (
+	farModulus = 1e6
+	farTime    = 1e4
+	farLogit   = 12.0
+)
+
+// lowest descends from all starts and returns where the sum is lowest, nil
+// where none of them settled.
+func lowest(s []Point, m Model, starts [][]float64) *search {
+	k := math.Log(strongest(s))
+	short, long := -math.Log(2*math.Pi*s[len(s)-1].FrequencyHz)-math.Log(farTime), -math.Log(2*math.Pi*s[0].FrequencyHz)+math.Log(farTime)
+	np := len(m.Parameters)
+	lower, upper := make([]float64, np), make([]float64, np)
+	for i, p := range m.Parameters {
+		switch {
+		case p.Share:
+			lower[i], upper[i] = -farLogit, farLogit
+		case p.Unit == "s":
+			lower[i], upper[i] = short, long
+		case p.Unit == "N s/m":
+			lower[i], upper[i] = short+k-math.Log(farModulus), long+k+math.Log(farModulus)
+		default:
+			lower[i], upper[i] = k-math.Log(farModulus), k+math.Log(farModulus)
+		}
+	}
+	p := make([]float64, np)
+	pr := problem{
+		n: 2 * len(s),
+		f: func(q, r []float64) bool {
+			outward(m, q, p)
+			for i, x := range s {
+				d := m.Modulus(2*math.Pi*x.FrequencyHz, p) - x.K
+				r[2*i], r[2*i+1] = real(d)/x.UStorage, imag(d)/x.ULoss
+			}
+			return true
+		},
+		most: 500, lower: lower, upper: upper,
+		reach: 2,    // e^2 a step
+		h:     1e-4, // of logarithms: the error of the slopes is 1e-9
+		// A millionth of the standard uncertainties.
+		offset: 1e-6, flat: 1e-7,
+	}
+	var best *search
+	for _, start := range starts {
+		q := inward(m, start)
+		for i := range q {
+			q[i] = math.Max(lower[i], math.Min(upper[i], q[i]))
+		}
+		x := newSearch(pr, q)
+		if err := x.descend(); err == nil && (best == nil || x.rss < best.rss) {
+			best = x
+		}
+	}
+	return best
+}
+
+// inward maps parameters to the variables of the solver: logarithms (of the
+// excess over another parameter), logits of shares.
 func inward(m Model, p []float64) []float64 {
 	q := make([]float64, len(p))
 	for i, x := range p {
-		if m.Parameters[i].Share {
+		switch e := m.Parameters[i].exceeds; {
+		case m.Parameters[i].Share:
 			q[i] = math.Log(x / (1 - x))
-		} else {
+		case e > 0:
+			q[i] = math.Log(math.Max(x-p[e-1], 1e-9*x))
+		default:
 			q[i] = math.Log(x)
 		}
 	}
 	return q
 }
 
-func outward(m Model, q []float64) []float64 {
-	p := make([]float64, len(q))
+// outward maps back, into p where it is not nil.
+func outward(m Model, q, p []float64) []float64 {
+	if p == nil {
+		p = make([]float64, len(q))
+	}
 	for i, x := range q {
-		if m.Parameters[i].Share {
+		switch e := m.Parameters[i].exceeds; {
+		case m.Parameters[i].Share:
 			p[i] = 1 / (1 + math.Exp(-x))
-		} else {
+		case e > 0:
+			p[i] = p[e-1] + math.Exp(x)
+		default:
 			p[i] = math.Exp(x)
 		}
 	}
 	return p
 }
 
-// Interval is a 95 % interval.
-type Interval struct{ Low, High float64 }
-
-// Bootstrap refits a model to n series drawn about the fitted curve with the
-// uncertainties of the points, widened like those of the parameters (parametric
-// bootstrap; Efron and Tibshirani 1993, from memory), and returns the 95 %
-// intervals of its parameters. each, if not nil, is shown every refitted model.
-func Bootstrap(series []Point, f Fitted, n int, seed uint64, each func(Fitted)) ([]Interval, error) {
-	s, err := sorted(series)
-	if err != nil {
-		return nil, err
+// slopesAt fills in the derivatives of parameter i by all of the solver's
+// variables.
+func slopesAt(m Model, p []float64, i int, slopes []float64) {
+	clear(slopes)
+	switch e := m.Parameters[i].exceeds; {
+	case m.Parameters[i].Share:
+		slopes[i] = p[i] * (1 - p[i])
+	case e > 0:
+		slopes[e-1], slopes[i] = p[e-1], p[i]-p[e-1]
+	default:
+		slopes[i] = p[i]
 	}
-	rng := rand.New(rand.NewPCG(seed, 0x76697363))
-	widen := math.Sqrt(math.Max(1, f.ChiSquared/float64(f.Freedom)))
-	drawn := slices.Clone(s)
-	values := make([][]float64, len(f.P))
-	for range n {
-		for i, p := range s {
-			drawn[i].K = f.Modulus(p.FrequencyHz) + complex(widen*p.UStorage*rng.NormFloat64(), widen*p.ULoss*rng.NormFloat64())
-		}
-		g, err := fit(drawn, f.Model, [][]float64{f.P})
-		if err != nil {
-			continue
-		}
-		for i := range values {
-			values[i] = append(values[i], g.P[i])
-		}
-		if each != nil {
-			each(g)
-		}
-	}
-	if len(values[0]) < n/2 {
-		return nil, errors.New("visco: most of the drawn series cannot be fitted")
-	}
-	out := make([]Interval, len(values))
-	for i, v := range values {
-		out[i] = middle95(v)
-	}
-	return out, nil
-}
-
-// middle95 returns the quantiles 2.5 and 97.5 % of values.
-func middle95(v []float64) Interval {
-	slices.Sort(v)
-	at := func(p float64) float64 {
-		x := p * float64(len(v)-1)
-		i := int(x)
-		if i+1 >= len(v) {
-			return v[len(v)-1]
-		}
-		return v[i] + (x-float64(i))*(v[i+1]-v[i])
-	}
-	return Interval{at(0.025), at(0.975)}
-}
-
-// Crossing is the time 1/w at which storage and loss modulus are equal. Where
-// the data show no crossing, one of Low and High is finite: the bound that they
-// set.
-type Crossing struct {
-	Time      float64 // s; NaN where there is only a bound
-	Low, High float64 // 95 % interval, or 0 and a bound, or a bound and +Inf
-}
-
-// Crossover finds the crossover time of a fitted model within the measured
-// frequencies and a third of a decade beyond, with the 95 % interval of n
-// bootstrap series. Without a crossing there, the bound is the end of the
-// measured range: K' above K” throughout says that the crossover lies at lower
-// frequencies, that is, at a longer time.
-func Crossover(series []Point, f Fitted, n int, seed uint64) (Crossing, error) {
-	s, err := sorted(series)
-	if err != nil {
-		return Crossing{}, err
-	}
-	lo, hi := s[0].FrequencyHz, s[len(s)-1].FrequencyHz
-	c := Crossing{Time: crossing(f, lo/2, hi*2)}
-	if math.IsNaN(c.Time) {
-		solid := 0
-		for _, p := range s {
-			if real(p.K) > imag(p.K) {
-				solid++
-			}
-		}
-		switch solid {
-		case len(s):
-			return Crossing{math.NaN(), 1 / (2 * math.Pi * lo), math.Inf(1)}, nil
-		case 0:
-			return Crossing{math.NaN(), 0, 1 / (2 * math.Pi * hi)}, nil
-		}
-		return Crossing{}, errors.New("visco: the model has no single crossing where the data have one")
-	}
-	var times []float64
-	if _, err := Bootstrap(series, f, n, seed, func(g Fitted) {
-		if t := crossing(g, lo/20, hi*20); !math.IsNaN(t) {
-			times = append(times, t)
-		}
-	}); err != nil {
-		return Crossing{}, err
-	}
-	if len(times) < n/2 {
-		return Crossing{}, errors.New("visco: the crossing is lost in most of the drawn series")
-	}
-	i := middle95(times)
-	c.Low, c.High = i.Low, i.High
-	return c, nil
-}
-
-// crossing returns 1/w at which K' = K” between two frequencies in Hz, NaN
-// where there is none.
-func crossing(f Fitted, from, to float64) float64 {
-	diff := func(lnF float64) float64 {
-		k := f.Modulus(math.Exp(lnF))
-		return (real(k) - imag(k)) / cmplx.Abs(k)
-	}
-	a, b := math.Log(from), math.Log(to)
-	da, db := diff(a), diff(b)
-	if da == 0 {
-		return 1 / (2 * math.Pi * from)
-	}
-	if !(da*db < 0) {
-		return math.NaN()
-	}
-	for range 100 {
-		m := (a + b) / 2
-		if d := diff(m); d*da > 0 {
-			a = m
-		} else {
-			b = m
-		}
-	}
-	return 1 / (2 * math.Pi * math.Exp((a+b)/2))
-}
-
-// Consistency is the outcome of a Kramers-Kronig check.
-type Consistency struct {
-	ChiSquared float64
-	Freedom    int
-	P          float64 // probability of a larger chi-squared from noise alone
-}
-
-// KramersKronig tests whether K' and K” of a series belong together: what a
-// causal linear material can do is described by models that obey the relations
-// by construction, so what the best of them leaves of the data must be noise.
-// The models are those of Models and a row of Maxwell elements at fixed times
-// with a spring and a dashpot (the linear test after Boukamp, J. Electrochem.
-// Soc. 142, 1995, from memory), two elements less than frequencies. The best is
-// the one with the largest probability; that makes false alarms rarer than P
-// says. It needs at least four frequencies.
-func KramersKronig(series []Point) (Consistency, error) {
-	s, err := sorted(series)
-	if err != nil {
-		return Consistency{}, err
-	}
-	if len(s) < 4 {
-		return Consistency{}, errors.New("visco: the Kramers-Kronig check needs at least four frequencies")
-	}
-	best, err := maxwellRow(s)
-	if err != nil {
-		return Consistency{}, err
-	}
-	r, err := Rank(s)
-	if err != nil {
-		return best, nil
-	}
-	for _, f := range r.Fits {
-		if c := consistency(f.ChiSquared, f.Freedom); c.P > best.P {
-			best = c
-		}
-	}
-	return best, nil
-}
-
-func consistency(chiSquared float64, freedom int) Consistency {
-	return Consistency{chiSquared, freedom, distuv.ChiSquared{K: float64(freedom)}.Survival(chiSquared)}
-}
-
-// maxwellRow fits the row of Maxwell elements.
-func maxwellRow(s []Point) (Consistency, error) {
-	elements := len(s) - 2
-	lo, hi := math.Log(2*math.Pi*s[0].FrequencyHz), math.Log(2*math.Pi*s[len(s)-1].FrequencyHz)
-	np := elements + 2
-	scale := strongest(s)
-	min, err := LeastSquares(2*len(s), func(p, r []float64) bool {
-		for i, x := range s {
-			w := 2 * math.Pi * x.FrequencyHz
-			k := complex(p[0], p[1]*w*math.Exp(-hi))
-			for e := range elements {
-				t := math.Exp(-(lo + (hi-lo)*(float64(e)+0.5)/float64(elements)))
-				z := complex(0, w*t)
-				k += complex(p[2+e], 0) * z / (1 + z)
-			}
-			d := k*complex(scale, 0) - x.K
-			r[2*i], r[2*i+1] = real(d)/x.UStorage, imag(d)/x.ULoss
-		}
-		return true
-	}, ones(np))
-	if err != nil {
-		return Consistency{}, err
-	}
-	return consistency(min.RSS, 2*len(s)-np), nil
-}
-
-func ones(n int) []float64 {
-	x := make([]float64, n)
-	for i := range x {
-		x[i] = 1
-	}
-	return x
 }
