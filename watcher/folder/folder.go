@@ -19,6 +19,7 @@ import (
 	"os"
 	"path"
 	"path/filepath"
+	"slices"
 	"strings"
 	"time"
 
@@ -296,6 +297,11 @@ func (f *Folder) look(touched map[string]bool) Batch {
 		info, err := os.Lstat(name)
 		if err != nil {
 			delete(f.watched, name)
+			// With its folder gone nothing is known of the file: the sweep
+			// tells a folder that was removed from one that is away.
+			if _, err := os.Lstat(filepath.Dir(name)); err != nil {
+				continue
+			}
 			if _, ok := f.files[filepath.ToSlash(rel)]; ok && errors.Is(err, fs.ErrNotExist) {
 				delete(f.files, filepath.ToSlash(rel))
 				b.Gone = append(b.Gone, filepath.ToSlash(rel))
@@ -309,6 +315,10 @@ func (f *Folder) look(touched map[string]bool) Batch {
 		}
 		f.consider(filepath.ToSlash(rel), info, &b)
 	}
+	// An entry may have gone and come, or come and gone, while its folder and
+	// itself were looked at: it is told as it is known now.
+	b.Gone = slices.DeleteFunc(b.Gone, func(p string) bool { return f.files[p] != nil })
+	b.Files = slices.DeleteFunc(b.Files, func(x File) bool { s := f.files[x.Path]; return s == nil || s.File != x })
 	return b
 }
 

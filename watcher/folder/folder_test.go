@@ -426,6 +426,69 @@ func TestWhateverIsDone(t *testing.T) {
 	}
 }
 
+// What one batch tells agrees with what is kept, also where a file goes and
+// comes while it is made: else the file would be known here, and never told.
+func TestBatchAgreesWithItself(t *testing.T) {
+	for range 30 { // the order in which touched entries are looked at is random
+		root := t.TempDir()
+		f, err := New(root, Options{Include: []string{"*.tsv"}, Notice: &listener{}})
+		if err != nil {
+			t.Fatal(err)
+		}
+		name := filepath.Join(root, "d", "a.tsv")
+		write := func(text string) {
+			os.MkdirAll(filepath.Dir(name), 0o755)
+			if err := os.WriteFile(name, []byte(text), 0o644); err != nil {
+				t.Fatal(err)
+			}
+		}
+		write("1")
+		f.sweep()
+		if err := os.Remove(name); err != nil {
+			t.Fatal(err)
+		}
+		f.list = func(dir string) ([]fs.DirEntry, error) {
+			write("123") // it is back just when its folder is listed
+			return os.ReadDir(dir)
+		}
+		b := f.look(map[string]bool{name: true, filepath.Dir(name): true})
+		told := map[string]int64{}
+		for _, x := range b.Files {
+			told[x.Path] = x.Size
+		}
+		for _, p := range b.Gone {
+			delete(told, p)
+		}
+		if !maps.Equal(told, map[string]int64{"d/a.tsv": 3}) {
+			t.Fatalf("new %v, gone %v", b.Files, b.Gone)
+		}
+	}
+}
+
+// With its folder gone nothing is known of a file: it does not count as gone
+// when an event names it.
+func TestFilesOfAFolderThatIsAway(t *testing.T) {
+	root := filepath.Join(t.TempDir(), "root")
+	if err := os.Mkdir(root, 0o755); err != nil {
+		t.Fatal(err)
+	}
+	name := filepath.Join(root, "a.tsv")
+	if err := os.WriteFile(name, nil, 0o644); err != nil {
+		t.Fatal(err)
+	}
+	f, err := New(root, Options{Include: []string{"*.tsv"}, Notice: &listener{}})
+	if err != nil {
+		t.Fatal(err)
+	}
+	f.sweep()
+	if err := os.Rename(root, root+".away"); err != nil {
+		t.Fatal(err)
+	}
+	if b := f.look(map[string]bool{name: true}); len(b.Gone) > 0 {
+		t.Errorf("%v told as gone", b.Gone)
+	}
+}
+
 // A missing folder, or a file in its place, is refused.
 func TestRefused(t *testing.T) {
 	missing := filepath.Join(t.TempDir(), "x")
