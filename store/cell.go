@@ -5,6 +5,7 @@ import (
 	"cmp"
 	"crypto/sha256"
 	"encoding/json"
+	"errors"
 	"fmt"
 	"slices"
 	"time"
@@ -41,40 +42,39 @@ func (s *Store) PutCell(doc run.CellResult) (revision int, isNew bool, err error
 	if err != nil {
 		return 0, false, err
 	}
-	if last, ok, err := s.lastCell(doc.Session, doc.Cell); err != nil {
-		return 0, false, err
-	} else if ok {
-		if was, err := json.Marshal(last.Document); err == nil && bytes.Equal(was, text) {
-			return last.Revision, false, nil // nothing to write
-		}
-	}
 	err = s.update(func(tx *bbolt.Tx) error {
 		b, err := tx.CreateBucketIfNotExists(bucketCellDocuments)
 		if err != nil {
 			return err
 		}
-		last, _, err := lastCellIn(b, doc.Session, doc.Cell)
+		last, there, err := lastCellIn(b, doc.Session, doc.Cell)
 		if err != nil {
 			return err
+		}
+		if there {
+			was, err := json.Marshal(last.Document)
+			if err != nil {
+				return err
+			}
+			if bytes.Equal(was, text) {
+				revision = last.Revision
+				return errNothingNew
+			}
 		}
 		revision = last.Revision + 1
 		key := fmt.Appendf(cellPrefix(doc.Session, doc.Cell), "%06d", revision)
 		return put(b, key, CellRecord{revision, s.now().UTC(), doc})
 	})
-	return revision, err == nil, err
+	switch {
+	case errors.Is(err, errNothingNew):
+		return revision, false, nil
+	case err != nil:
+		return 0, false, err
+	}
+	return revision, true, nil
 }
 
-// lastCell returns the newest revision of a cell's document.
-func (s *Store) lastCell(session, cell string) (r CellRecord, ok bool, err error) {
-	err = s.view(func(tx *bbolt.Tx) (err error) {
-		if b := tx.Bucket(bucketCellDocuments); b != nil {
-			r, ok, err = lastCellIn(b, session, cell)
-		}
-		return err
-	})
-	return r, ok, err
-}
-
+// lastCellIn returns the newest revision of a cell's document.
 func lastCellIn(b *bbolt.Bucket, session, cell string) (r CellRecord, ok bool, err error) {
 	prefix := cellPrefix(session, cell)
 	c := b.Cursor()

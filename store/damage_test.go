@@ -11,6 +11,8 @@ import (
 	"strings"
 	"testing"
 	"time"
+
+	"go.etcd.io/bbolt"
 )
 
 // content is everything that can be read from a store.
@@ -214,5 +216,99 @@ func TestDamagedStoreIsRefusedOrSetAside(t *testing.T) {
 	// A store in order is not set aside.
 	if s := open(t, place(t, file), Options{SetAside: true}); s.SetAside() != "" {
 		t.Errorf("set aside without need: %s", s.SetAside())
+	}
+}
+
+// Many kinds of damage at many places, met by a service that starts: whether it
+// understands the store or refuses it, not one byte of it changes; what it
+// understands is what was stored.
+func TestOpenNeverChangesWhatItFinds(t *testing.T) {
+	file, last, before := sample(t)
+	random := rand.New(rand.NewPCG(5, 6))
+	refused, understood := 0, 0
+	for i := range 120 {
+		bad := bytes.Clone(file)
+		at := random.IntN(len(bad))
+		what := ""
+		switch i % 4 {
+		case 0:
+			bad = bad[:at]
+			what = "cut"
+		case 1:
+			bad[at] ^= 1 << random.IntN(8)
+			what = "bit"
+		case 2:
+			clear(bad[at:min(len(bad), at+512)])
+			what = "sector of zeros"
+		case 3:
+			for j := range bad[at:min(len(bad), at+16)] {
+				bad[at+j] = byte(random.Uint32())
+			}
+			what = "16 bytes of noise"
+		}
+		what += " at " + strconv.Itoa(at)
+		folder := place(t, bad)
+		crashed := random.IntN(2) == 0
+		if crashed {
+			if err := os.WriteFile(filepath.Join(folder, "platen.owner"), nil, 0o600); err != nil {
+				t.Fatal(err)
+			}
+		}
+		s, err := Open(folder, Options{})
+		var d *DamagedError
+		switch {
+		case err == nil:
+			c, err := contentOf(s)
+			if err == nil && !reflect.DeepEqual(c, last) && !reflect.DeepEqual(c, before) {
+				t.Errorf("%s: understood, but with another content", what)
+			}
+			// A store that was closed in order is not read through at the start:
+			// damage inside a value is met when that is read.
+			if err != nil && (crashed || !errors.As(err, &d)) {
+				t.Errorf("%s: opened (checked: %v), but: %v", what, crashed, err)
+			}
+			s.Close()
+			understood++
+		case errors.As(err, &d):
+			refused++
+		default:
+			t.Errorf("%s: refused, but not as damaged: %v", what, err)
+		}
+		if !bytes.Equal(must[[]byte](t)(os.ReadFile(filepath.Join(folder, "platen.db"))), bad) {
+			t.Fatalf("%s: the file has changed", what)
+		}
+	}
+	t.Logf("%d refused, %d understood", refused, understood)
+	if refused == 0 || understood == 0 {
+		t.Error("the damage was all of one kind")
+	}
+}
+
+// The mark of a service that did not end in order makes the next look through
+// everything; without it the start is fast.
+func TestUncleanEndTriggersTheCheck(t *testing.T) {
+	s := open(t, t.TempDir(), Options{})
+	putOne(t, s, entry("/x/a.tsv", "a"))
+	if err := s.update(func(tx *bbolt.Tx) error { return tx.Bucket(byCell.bucket).Put([]byte("x"), []byte("x")) }); err != nil {
+		t.Fatal(err)
+	}
+	if err := s.Close(); err != nil {
+		t.Fatal(err)
+	}
+	clean := open(t, s.folder, Options{})
+	if err := clean.Close(); err != nil {
+		t.Fatal(err)
+	}
+	for _, mark := range []string{"", "half a no", `{"pid":1}`} {
+		if err := os.WriteFile(s.lock.owner, []byte(mark), 0o600); err != nil {
+			t.Fatal(err)
+		}
+		// The refusal leaves the mark: the next start looks again.
+		for range 2 {
+			var d *DamagedError
+			if _, err := Open(s.folder, Options{}); !errors.As(err, &d) || !strings.Contains(d.Reason, "cells: ") {
+				t.Errorf("mark %q: %v", mark, err)
+			}
+		}
 	}
 }

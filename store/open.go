@@ -45,7 +45,7 @@ func Open(folder string, o Options) (*Store, error) {
 	if err != nil {
 		return nil, err
 	}
-	s := &Store{folder: folder, lock: l, now: o.Now, file: dbFileIn(folder), unsure: map[Ref]bool{}}
+	s := &Store{folder: folder, lock: l, now: o.Now, file: dbFileIn(folder), unsure: map[Ref]unsaid{}}
 	if s.now == nil {
 		s.now = time.Now
 	}

@@ -62,36 +62,47 @@ func (s *Store) Put(entries ...Entry) ([]Stored, error) {
 		return nil
 	})
 	if err != nil && !errors.Is(err, errNothingNew) {
-		s.remember(p.out)
+		s.remember(entries, p.out)
 		return nil, err
 	}
-	s.recall(p.out)
+	s.recall(entries, p.out)
 	return p.out, nil
 }
 
 // errNothingNew ends a transaction that would write what is there already.
 var errNothingNew = errors.New("nothing new")
 
+// unsaid is what a failed commit would have told of a new result.
+type unsaid struct {
+	path       string
+	supersedes *Ref
+}
+
 // remember notes the results of a transaction that failed. Its last write may
 // have reached the disk all the same: then the next attempt finds them there,
 // but they are still news to the caller.
-func (s *Store) remember(failed []Stored) {
+func (s *Store) remember(entries []Entry, failed []Stored) {
 	s.mu.Lock()
 	defer s.mu.Unlock()
-	for _, st := range failed {
+	for i, st := range failed {
 		if st.New && s.unsure != nil {
-			s.unsure[st.Ref] = true
+			s.unsure[st.Ref] = unsaid{entries[i].Path, st.Supersedes}
 		}
 	}
 }
 
-func (s *Store) recall(stored []Stored) {
+func (s *Store) recall(entries []Entry, stored []Stored) {
 	s.mu.Lock()
 	defer s.mu.Unlock()
 	for i, st := range stored {
-		if s.unsure[st.Ref] {
-			stored[i].New = true
-			delete(s.unsure, st.Ref)
+		u, ok := s.unsure[st.Ref]
+		if !ok {
+			continue
+		}
+		delete(s.unsure, st.Ref)
+		stored[i].New = true
+		if st.Supersedes == nil && u.path == entries[i].Path {
+			stored[i].Supersedes = u.supersedes
 		}
 	}
 }

@@ -269,6 +269,9 @@ func TestFailedCommit(t *testing.T) {
 		if !again.New || s.doubt {
 			t.Errorf("landed %v: the second attempt: %+v, doubt %v", landed, again, s.doubt)
 		}
+		if again.Supersedes == nil || *again.Supersedes != old.Ref {
+			t.Errorf("landed %v: the second attempt supersedes %v, want %s", landed, again.Supersedes, old.Ref)
+		}
 		if third := putOne(t, s, entry("/x/a.tsv", "b", repeat)); third.New {
 			t.Errorf("landed %v: new once more", landed)
 		}

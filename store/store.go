@@ -5,7 +5,8 @@
 // look while a service runs.
 //
 // The state folder holds platen.db, platen.lock (held as long as a service
-// has the folder) and platen.owner (who that is; left behind by a crash).
+// has the folder), platen.owner (who that is; left behind by a crash) and
+// platen.turn (held by whoever is next to open platen.db).
 // platen.db has these buckets; a value is JSON, a line end, and the CRC-32C of
 // key and JSON in hexadecimal, so that a spoiled value is never taken for a
 // result:
@@ -70,12 +71,13 @@ type Store struct {
 	closed  bool
 	damaged atomic.Pointer[DamagedError] // set for good once damage has been met
 	doubt   bool                         // the last commit failed: check before the next
-	unsure  map[Ref]bool                 // results of failed commits, which may be there all the same
+	unsure  map[Ref]unsaid               // results of failed commits, which may be there all the same
 }
 
 // dbFile is how the database file is reached; tests make its steps fail.
 type dbFile struct {
 	path   string
+	turn   string        // the lock file of the line before it
 	wait   time.Duration // for others who have it open
 	open   func(name string, flag int, perm os.FileMode) (*os.File, error)
 	commit func(*bbolt.DB, func(*bbolt.Tx) error) error
@@ -84,6 +86,7 @@ type dbFile struct {
 func dbFileIn(folder string) dbFile {
 	return dbFile{
 		path:   filepath.Join(folder, "platen.db"),
+		turn:   filepath.Join(folder, "platen.turn"),
 		wait:   10 * time.Second,
 		open:   os.OpenFile,
 		commit: (*bbolt.DB).Update,
@@ -203,8 +206,8 @@ func (s *Store) with(readOnly bool, do func(*bbolt.DB) error) (err error) {
 			err = s.isDamaged(fmt.Sprint(p))
 		}
 	}()
-	db, err := bbolt.Open(s.file.path, 0o600, &bbolt.Options{
-		Timeout: s.file.wait, ReadOnly: readOnly, FreelistType: bbolt.FreelistMapType,
+	db, err := s.file.openInTurn(bbolt.Options{
+		ReadOnly: readOnly, FreelistType: bbolt.FreelistMapType,
 		OpenFile: func(name string, flag int, perm os.FileMode) (*os.File, error) {
 			// bbolt would make a store where there is none and fill an empty
 			// file: both would be a store emptied in silence.

@@ -97,6 +97,7 @@ func clock() func() time.Time {
 	}
 }
 
+// open opens a store and closes it at the end of the test.
 func open(t testing.TB, folder string, o Options) *Store {
 	t.Helper()
 	if o.Now == nil {
@@ -118,7 +119,7 @@ func inOrder(t testing.TB, s *Store) {
 	}
 }
 
-// put stores one entry.
+// putOne stores one entry.
 func putOne(t testing.TB, s *Store, e Entry) Stored {
 	t.Helper()
 	return must[[]Stored](t)(s.Put(e))[0]
